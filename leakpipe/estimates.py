@@ -1,8 +1,8 @@
 """An estimate: a number with its interval, or the statement that the data cannot tell.
 
 Every number leakpipe reports is an `Estimate`. Inside a stage's dataset one estimate is stored as
-the variables ``name``, ``name_low``, ``name_high`` (float, NaN where unknown), ``name_identifiable``
-(bool as int8) and ``name_basis`` (text), all over the same dimensions.
+the variables ``name``, ``name_low``, ``name_high`` (float, NaN where unknown),
+``name_identifiable`` (bool as int8) and ``name_basis`` (text), all over the same dimensions.
 """
 
 from __future__ import annotations

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager
 from typing import Protocol
 
 
@@ -17,17 +17,11 @@ class Step(Protocol):
 class Reporter(Protocol):
     """What the pipeline needs of a progress display."""
 
-    def step(self, label: str, total: int | None = None) -> _StepContext:
+    def step(self, label: str, total: int | None = None) -> AbstractContextManager[Step]:
         """Open a step; it closes when its context ends."""
 
     def say(self, text: str) -> None:
         """Show one line of text."""
-
-
-class _StepContext(Protocol):
-    def __enter__(self) -> Step: ...
-
-    def __exit__(self, *exc: object) -> bool | None: ...
 
 
 class _Nothing:
@@ -42,7 +36,7 @@ class Silent:
     def _nothing(self) -> Iterator[Step]:
         yield _Nothing()
 
-    def step(self, label: str, total: int | None = None) -> _StepContext:
+    def step(self, label: str, total: int | None = None) -> AbstractContextManager[Step]:
         """Open a step that shows nothing."""
         return self._nothing()
 

@@ -43,7 +43,8 @@ def parities(bits: NDArray[np.uint8], layout: Layout) -> NDArray[np.uint8]:
 
 def logical_parity(bits: NDArray[np.uint8], layout: Layout, basis: Basis) -> NDArray[np.uint8]:
     """Return the parity of the logical operator's data qubits: (shot, data) -> (shot,)."""
-    return np.bitwise_xor.reduce(bits[:, list(layout.logical[basis])], axis=1)
+    support = list(layout.logical[basis])
+    return np.asarray(np.bitwise_xor.reduce(bits[:, support], axis=1), dtype=np.uint8)
 
 
 def detection_events(

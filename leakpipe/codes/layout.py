@@ -71,7 +71,7 @@ class Layout:
     @cached_property
     def weights(self) -> NDArray[np.int64]:
         """Number of data qubits of each check, (M,)."""
-        return self.adjacency.sum(axis=1)
+        return np.asarray(self.adjacency.sum(axis=1), dtype=np.int64)
 
     @cached_property
     def sharing_pairs(self) -> tuple[tuple[int, int], ...]:
@@ -108,7 +108,9 @@ def _contradictions(layout: Layout) -> list[str]:
     if layout.data_at.shape != (len(layout.data), 2):
         problems.append(f"data positions have shape {layout.data_at.shape}, expected (data, 2)")
     if layout.measure_at.shape != (len(layout.measure), 2):
-        problems.append(f"check positions have shape {layout.measure_at.shape}, expected (check, 2)")
+        problems.append(
+            f"check positions have shape {layout.measure_at.shape}, expected (check, 2)"
+        )
     busy: dict[tuple[str, int], str] = {}
     for name, qubits, slots in zip(layout.measure, layout.touches, layout.slots, strict=True):
         if len(set(qubits)) != len(qubits) or not qubits:
@@ -118,9 +120,8 @@ def _contradictions(layout: Layout) -> list[str]:
         for qubit, slot in zip(qubits, slots, strict=False):
             for user in (layout.data[qubit], name):
                 if (user, slot) in busy:
-                    problems.append(
-                        f"qubit {user} is in two gates of slot {slot}: {busy[user, slot]} and {name}"
-                    )
+                    both = f"{busy[user, slot]} and {name}"
+                    problems.append(f"qubit {user} is in two gates of slot {slot}: {both}")
                 busy[user, slot] = name
     problems += _anticommuting(layout)
     return problems
