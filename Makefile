@@ -30,10 +30,10 @@ lint: $(READY)
 	$(BIN)/mypy
 
 bench: $(READY)
-	$(BIN)/python -m benchmarks
+	$(BIN)/python -m benchmarks $(ONLY)
 
 study: $(READY)
-	$(BIN)/python -m studies
+	$(BIN)/python -m studies $(ONLY)
 
 clean:
 	rm -rf $(VENV) demo-out .pytest_cache .mypy_cache .ruff_cache .hypothesis

@@ -1,0 +1,1 @@
+"""Speeds as ratios within one run, started by `make bench`."""

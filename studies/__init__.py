@@ -1,0 +1,1 @@
+"""Long statistical runs, started by `make study`."""
