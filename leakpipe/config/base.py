@@ -8,4 +8,6 @@ from pydantic import BaseModel, ConfigDict
 class Section(BaseModel):
     """A part of the configuration. Field descriptions are shown in errors and the JSON Schema."""
 
-    model_config = ConfigDict(frozen=True, strict=True, extra="forbid", use_attribute_docstrings=True)
+    model_config = ConfigDict(
+        frozen=True, strict=True, extra="forbid", use_attribute_docstrings=True
+    )
