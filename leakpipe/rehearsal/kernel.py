@@ -29,10 +29,7 @@ BLOCK_SHOTS = 64 * WORDS
 HAZARD_CAP = 40.0
 """Stands for certainty: the clock holds at most 53 ln 2 = 36.7, so a capped site always fires."""
 
-_ALL = np.uint64(0xFFFFFFFFFFFFFFFF)
 _ONE = np.uint64(1)
-_SIX = np.uint64(6)
-_LOW_SIX = np.uint64(63)
 _TO_UNIT = 2.0**-53
 
 Words = NDArray[np.uint64]
@@ -56,13 +53,15 @@ def _next(random: Words) -> Any:
 @njit(cache=True, nogil=True, inline="always")
 def _unit(random: Words) -> float:
     """Return a uniform number in [0, 1)."""
-    return (_next(random) >> uint64(11)) * _TO_UNIT
+    value: float = (_next(random) >> uint64(11)) * _TO_UNIT
+    return value
 
 
 @njit(cache=True, nogil=True, inline="always")
 def _exponential(random: Words) -> float:
     """Return an exponential number of mean 1."""
-    return -np.log(((_next(random) >> uint64(11)) + uint64(1)) * _TO_UNIT)
+    value: float = -np.log(((_next(random) >> uint64(11)) + uint64(1)) * _TO_UNIT)
+    return value
 
 
 @njit(cache=True, nogil=True)
@@ -141,7 +140,7 @@ def _seep(x: Words, z: Words, leak: Words, probability: float, random: Words) ->
 
 
 @njit(cache=True, nogil=True, inline="always")
-def _chosen(mask: int, probability: float, random: Words) -> Any:
+def _chosen(mask: Any, probability: float, random: Words) -> Any:
     """Keep each set bit of a word with the given probability."""
     if probability >= 1.0:
         return mask

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields, replace
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -97,7 +97,8 @@ class MemoryNoise:
         ConfigError
             Some fields do not fit; every one is listed.
         """
-        problems, arrays = [], {}
+        problems: list[str] = []
+        arrays: dict[str, Any] = {}
         for one in fields(self):
             try:
                 arrays[one.name] = self.per_qubit(one.name, layout)
@@ -105,12 +106,9 @@ class MemoryNoise:
                 problems.append(str(error))
         if problems:
             raise ConfigError(numbered(problems, "nothing was simulated"))
-        scalars = {
-            "transport": self.transport,
-            "strength": self.strength,
-            "depolarise": self.depolarise,
-        }
-        return replace(self, **(arrays | scalars))
+        for scalar in ("transport", "strength", "depolarise"):
+            del arrays[scalar]
+        return replace(self, **arrays)
 
     def without_injection(self) -> MemoryNoise:
         """Return the same noise with no way to leak: the counterfactual of the share's truth."""
@@ -183,7 +181,8 @@ class QubitOverrides:
         """
         names = [*layout.data, *layout.measure]
         known = {one.name for one in fields(noise)}
-        problems, arrays = [], {}
+        problems: list[str] = []
+        arrays: dict[str, Any] = {}
         for name, factors in self.factor.items():
             if name not in known:
                 problems.append(f"noise has no field {name!r}")
