@@ -50,7 +50,9 @@ class MemoryNoise:
     initial
         Leaked at the start of the shot.
     strength
-        A gate with a leaked partner strikes the unleaked qubit at all; 1 randomises it fully.
+        A gate with a leaked partner strikes the unleaked qubit at all; 1 randomises it fully. In a
+        surface code the checks of a leaked data qubit are random anyway (two checks that both miss
+        the qubit no longer commute), in a repetition code they flip with half the strength.
     depolarise
         Part of those strikes that depolarise the unleaked qubit fully; the rest are a phase-type
         flip with probability 1/2.
