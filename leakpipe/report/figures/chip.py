@@ -1,0 +1,140 @@
+"""Map of the steady leakage on the chip, with value and uncertainty of every qubit."""
+
+from __future__ import annotations
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.patches import Circle, Patch, Rectangle
+
+from leakpipe.estimates import Estimate
+from leakpipe.report.figures.style import COLUMN, FULL, Drawing, NothingToDraw, canvas, short_name
+from leakpipe.report.inputs import PatchReport
+from leakpipe.report.palette import LIGHT
+from leakpipe.report.wording import decimals_for, percent
+
+TITLE = "Steady leakage on the chip"
+LARGEST = 0.62
+"""Radius of the largest symbol; neighbouring qubits stand sqrt 2 apart."""
+
+BARE = 0.5
+"""Radius of the dotted symbol of a qubit whose leakage is not identifiable."""
+
+MANY = 24
+"""With more qubits than this the map takes the full width."""
+
+
+def draw(patch: PatchReport, place: str) -> Drawing:
+    """Draw one symbol per qubit: area is leakage, outlines are the ends of its interval.
+
+    Raises
+    ------
+    NothingToDraw
+        No qubit has an estimate or a limit.
+    """
+    layout = patch.layout
+    qubits = [*layout.data, *layout.measure]
+    at = np.concatenate([layout.data_at, layout.measure_at])
+    levels = [patch.estimate("rates", "qubit_steady_leakage", {"qubit": name}) for name in qubits]
+    known = [level for level in levels if level.value is not None]
+    if not known:
+        raise NothingToDraw(f"no steady leakage per qubit: {levels[0].basis}")
+    largest = max(max(level.value or 0.0, level.high or 0.0) for level in known)
+    span = np.ptp(at, axis=0) + 2 * LARGEST + 0.3
+    width = FULL if len(qubits) > MANY else COLUMN
+    height = min(max(width * span[1] / span[0], 1.1) + 0.75, 9.5)
+    figure = canvas(width, height, TITLE, place)
+    axes = figure.subplots()
+    axes.set_aspect("equal")
+    axes.axis("off")
+    low, high = at.min(axis=0) - LARGEST - 0.1, at.max(axis=0) + LARGEST + 0.1
+    axes.set_xlim(low[0], high[0])
+    axes.set_ylim(low[1], high[1])
+    _couplers(patch, axes)
+    points_per_unit = 72 * min((width - 0.1) / span[0], (height - 0.75) / span[1])
+    size = min(8.0, 0.19 * points_per_unit)
+    for name, level, (x, y), role in zip(
+        qubits,
+        levels,
+        at,
+        ["data"] * len(layout.data) + ["measure"] * len(layout.measure),
+        strict=True,
+    ):
+        _symbol(axes, (x, y), level, role, largest)
+        _words(axes, (x, y), name, level, size)
+    order = sorted(known, key=lambda level: -(level.value or 0.0))
+    worst = qubits[levels.index(order[0])]
+    unknown = len(levels) - len(known)
+    lost = f" Dotted: not identifiable ({unknown})." if unknown else ""
+    return Drawing(
+        figure,
+        TITLE,
+        "Circles are data qubits, squares measure qubits; the filled area is the steady leakage, "
+        "the thin outlines are the ends of its 95 % interval. Numbers: percent and half the "
+        f"interval.{lost}",
+        f"Map of {len(qubits)} qubits. Largest steady leakage: {worst}, {percent(order[0])}; "
+        f"median {100 * float(np.median([level.value or 0.0 for level in known])):.2g} %.",
+    )
+
+
+def _couplers(patch: PatchReport, axes: Axes) -> None:
+    """Draw a thin line for every pair of qubits that share a gate."""
+    for check, touched in enumerate(patch.layout.touches):
+        start = patch.layout.measure_at[check]
+        for qubit in touched:
+            end = patch.layout.data_at[qubit]
+            axes.plot(*zip(start, end, strict=True), color=LIGHT["hair"], linewidth=1.0, zorder=1)
+
+
+def _symbol(
+    axes: Axes, at: tuple[float, float], level: Estimate, role: str, largest: float
+) -> None:
+    if level.value is None:
+        axes.add_patch(
+            _shape(
+                role, at, BARE, facecolor=LIGHT["surface"], edgecolor=LIGHT["quiet"], linestyle=":"
+            )
+        )
+        return
+
+    def radius(amount: float | None) -> float:
+        return LARGEST * float(np.sqrt(max(amount or 0.0, 0.0) / largest))
+
+    axes.add_patch(
+        _shape(role, at, BARE, facecolor=LIGHT["surface"], edgecolor="none", linestyle="-")
+    )
+    axes.add_patch(
+        _shape(role, at, radius(level.value), facecolor=LIGHT[role], edgecolor="none", alpha=0.32)
+    )
+    for end in (level.low, level.high):
+        if end is not None and end > 0:
+            axes.add_patch(
+                _shape(role, at, radius(end), fill=False, edgecolor=LIGHT[role], linewidth=0.9)
+            )
+
+
+def _shape(role: str, at: tuple[float, float], radius: float, **look: object) -> Patch:
+    """Return a circle for a data qubit and a square of the same area for a measure qubit."""
+    if role == "data":
+        return Circle(at, radius, zorder=2, **look)  # type: ignore[arg-type]
+    side = radius * float(np.sqrt(np.pi))
+    corner = (at[0] - side / 2, at[1] - side / 2)
+    return Rectangle(corner, side, side, zorder=2, **look)  # type: ignore[arg-type]
+
+
+def _words(axes: Axes, at: tuple[float, float], name: str, level: Estimate, size: float) -> None:
+    """Write name, value and half interval on a qubit."""
+    axes.annotate(
+        short_name(name, 8), at, xytext=(0, 0.68 * size), textcoords="offset points",
+        ha="center", va="center", size=size, weight="bold", zorder=5,
+    )  # fmt: skip
+    if level.value is None:
+        said = "?"
+    else:
+        half = None if level.low is None or level.high is None else 50 * (level.high - level.low)
+        digits = decimals_for(100 * level.value, half)
+        spread = "" if half is None else f"±{half:.{digits}f}"
+        said = f"{100 * level.value:.{digits}f}{spread}"
+    axes.annotate(
+        said, at, xytext=(0, -0.62 * size), textcoords="offset points",
+        ha="center", va="center", size=0.88 * size, zorder=5,
+    )  # fmt: skip

@@ -1,0 +1,263 @@
+"""Readout clouds of every qubit, in one common scale, and a one-look overview of all qubits."""
+
+from __future__ import annotations
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.patches import Circle
+
+from leakpipe.report.figures.style import (
+    COLUMN,
+    FULL,
+    Array,
+    Drawing,
+    NothingToDraw,
+    canvas,
+    short_name,
+)
+from leakpipe.report.inputs import PatchReport
+from leakpipe.report.palette import LIGHT
+
+TITLE = "Readout clouds and decision regions"
+COLORS = ("data", "measure", "third")
+"""Colours of the states 0, 1, 2."""
+
+MARKERS = ("o", "s", "^")
+MOST_POINTS = 120
+"""Points drawn per cloud: enough to see its shape, few enough for one page."""
+
+REACH = 3.2
+"""How far beyond the outermost mean a panel reaches, in standard deviations of a cloud."""
+
+GRID = 90
+"""Grid points per axis for the decision regions."""
+
+
+def plane(means: Array, covariance: Array) -> tuple[Array, Array, Array]:
+    """Return the plane through the class means in units of the clouds' own spread.
+
+    Parameters
+    ----------
+    means
+        Class means, (state, feature); two or three states.
+    covariance
+        The covariance all classes share, (feature, feature).
+
+    Returns
+    -------
+    origin, axes, positions
+        Mean of state 0 (feature,), the map from features to the plane (feature, 2), and the class
+        means in it (state, 2). State 0 is at the origin, state 1 on the positive first axis, state 2
+        above it; every cloud is a unit circle.
+
+    Raises
+    ------
+    numpy.linalg.LinAlgError
+        The covariance is not positive definite.
+    """
+    lower = np.linalg.cholesky(covariance)
+    whiten = np.linalg.inv(lower).T
+    white = (means - means[0]) @ whiten
+    first = white[1] / max(float(np.linalg.norm(white[1])), np.finfo(float).tiny)
+    rest = white[2] - (white[2] @ first) * first if len(white) > 2 else np.zeros_like(first)
+    if np.linalg.norm(rest) < 1e-9:
+        # Two states, or three on a line: any direction across it will do.
+        across = np.eye(len(first))[np.argmin(np.abs(first))]
+        rest = across - (across @ first) * first
+    second = rest / np.linalg.norm(rest)
+    turn = whiten @ np.stack([first, second], axis=1)
+    return means[0], turn, (means - means[0]) @ turn
+
+
+def separations(patch: PatchReport) -> Array | None:
+    """Return the distances 01, 12, 02 of every qubit's means in standard deviations, (qubit, 3).
+
+    NaN where a state or the covariance is missing. None if there is no readout model.
+    """
+    found = _means(patch)
+    if found is None:
+        return None
+    means, covariance = found
+    out = np.full((len(means), 3), np.nan)
+    for row, (mean, spread) in enumerate(zip(means, covariance, strict=True)):
+        known = np.isfinite(mean).all(axis=1)
+        for column, (a, b) in enumerate(((0, 1), (1, 2), (0, 2))):
+            if b < len(mean) and known[a] and known[b] and np.isfinite(spread).all():
+                apart = mean[b] - mean[a]
+                out[row, column] = np.sqrt(apart @ np.linalg.solve(spread, apart))
+    return out
+
+
+def _means(patch: PatchReport) -> tuple[Array, Array] | None:
+    data = patch.stage("model")
+    if data is None or "means" not in data or "covariance" not in data:
+        return None
+    means = np.asarray(data["means"].transpose("qubit", ...).values, dtype=np.float64)
+    covariance = np.asarray(data["covariance"].transpose("qubit", ...).values, dtype=np.float64)
+    return (means, covariance) if means.ndim == 3 and covariance.ndim == 3 else None
+
+
+def draw(patch: PatchReport, place: str) -> Drawing:
+    """Draw one small panel per qubit: clouds as circles, regions as shades, points if given.
+
+    Raises
+    ------
+    NothingToDraw
+        There is no readout model.
+    """
+    found = _means(patch)
+    if found is None:
+        raise NothingToDraw("no readout model (the recordings hold states, not points)")
+    means, covariance = found
+    qubits = patch.labels("model", "qubit")
+    columns = 5 if len(qubits) <= 25 else 7
+    rows = -(-len(qubits) // columns)
+    figure = canvas(FULL, 0.75 + FULL / columns * 0.86 * rows, TITLE, place)
+    panels = np.atleast_1d(figure.subplots(rows, columns)).ravel()
+    for panel in panels:
+        panel.axis("off")
+    for panel, name, mean, spread in zip(panels, qubits, means, covariance, strict=False):
+        panel.set_title(short_name(str(name)), size=8, pad=2)
+        known = np.isfinite(mean).all(axis=1)
+        if known.sum() < 2 or not np.isfinite(spread).all():
+            panel.text(0.5, 0.5, "no model", ha="center", va="center", size=8)
+            continue
+        origin, turn, at = plane(mean[known], spread)
+        _panel(panel, at, _prior(patch, str(name), int(known.sum())))
+        _cloud(patch, panel, name, origin, turn)
+    return Drawing(
+        figure,
+        TITLE,
+        "Each panel looks at the plane through a qubit's class means, turned so that 0 (circle) and "
+        "1 (square) lie level, and scaled so that every cloud has a spread of one: the same "
+        "distance is the same distance everywhere. Rings: 2 standard deviations. Shades: which "
+        "label a point gets. Dashes: path of a decay during the readout.",
+        f"Readout clouds of {len(qubits)} qubits with their decision regions.",
+    )
+
+
+def _prior(patch: PatchReport, qubit: str, states: int) -> Array:
+    """Return the working prior of a qubit's labels, equal where the model names none."""
+    data = patch.stage("model")
+    if data is None or "working_prior" not in data:
+        return np.full(states, 1 / states)
+    prior = data["working_prior"]
+    values = (prior.sel(qubit=qubit) if "qubit" in prior.dims else prior).values
+    return np.asarray(values, dtype=np.float64)[:states]
+
+
+def _panel(panel: Axes, at: Array, prior: Array) -> None:
+    low, high = at.min(axis=0) - REACH, at.max(axis=0) + REACH
+    side = float((high - low).max()) / 2
+    middle = (low + high) / 2
+    x, y = (np.linspace(middle[i] - side, middle[i] + side, GRID) for i in (0, 1))
+    spots = np.stack(np.meshgrid(x, y), axis=-1)
+    score = np.log(prior) - 0.5 * ((spots[:, :, None] - at) ** 2).sum(axis=-1)
+    winner = score.argmax(axis=-1)
+    for state in range(len(at)):
+        if (winner == state).any():
+            inside = (winner == state).astype(float)
+            panel.contourf(
+                x, y, inside, levels=[0.5, 1.5], colors=[LIGHT[COLORS[state]]], alpha=0.13
+            )
+    for state, spot in enumerate(at):
+        color = LIGHT[COLORS[state]]
+        panel.add_patch(Circle(spot, 2.0, fill=False, edgecolor=color, linewidth=1.0))
+        panel.plot(*spot, MARKERS[state], color=color, markersize=3)
+        if state:
+            panel.plot(
+                *at[[state, state - 1]].T,
+                color=LIGHT["quiet"],
+                linewidth=0.7,
+                linestyle=(0, (3, 2)),
+                zorder=1,
+            )
+    panel.set_xlim(x[0], x[-1])
+    panel.set_ylim(y[0], y[-1])
+    panel.set_aspect("equal")
+
+
+def _cloud(patch: PatchReport, panel: Axes, qubit: object, origin: Array, turn: Array) -> None:
+    """Draw a subsample of calibration points, where the report was given some."""
+    if patch.points is None or qubit not in patch.points["qubit"].values:
+        return
+    iq = patch.points["iq"].sel(qubit=qubit).transpose("prepared", "point", "quadrature").values
+    if iq.shape[-1] != turn.shape[0]:
+        return
+    for prepared, cloud in enumerate(iq[: len(COLORS)]):
+        spots = (cloud[:MOST_POINTS] - origin) @ turn
+        panel.plot(
+            *spots.T, ".", color=LIGHT[COLORS[prepared]], markersize=1.6, alpha=0.5,
+            markeredgewidth=0, rasterized=True, zorder=1,
+        )  # fmt: skip
+
+
+OVERVIEW = "Readout of all qubits"
+
+
+def overview(patch: PatchReport, place: str) -> Drawing:
+    """Draw the separations and the assignment error of every qubit side by side.
+
+    Raises
+    ------
+    NothingToDraw
+        There is no readout model.
+    """
+    apart = separations(patch)
+    qubits = [str(name) for name in patch.labels("model", "qubit")]
+    if apart is None:
+        raise NothingToDraw("no readout model (the recordings hold states, not points)")
+    estimates = [patch.estimate("model", "assignment", {"qubit": name}) for name in qubits]
+    known = [e.value is not None for e in estimates]
+    wide = len(qubits) > 20
+    figure = canvas(FULL if wide else COLUMN, 3.9, OVERVIEW, place)
+    upper, lower = figure.subplots(2, 1, sharex=True)
+    x = np.arange(len(qubits), dtype=float)
+    pairs = ("0 and 1", "1 and 2", "0 and 2")
+    for column, (words, marker, color) in enumerate(zip(pairs, MARKERS, COLORS, strict=True)):
+        upper.plot(x, apart[:, column], marker, color=LIGHT[color], label=words, markersize=4)
+    upper.set_ylabel("distance of means\n(std. deviations)")
+    upper.set_ylim(bottom=0)
+    upper.legend(ncols=3, loc="lower left", bbox_to_anchor=(0, 1), borderaxespad=0.1, fontsize=8.5)
+    usable = patch.labels("readout", "usable")
+    names = patch.labels("readout", "qubit")
+    refused = [n for n, good in zip(names, usable, strict=False) if not good]
+    if any(known):
+        wrong = np.array(
+            [100 * (1 - e.value) if e.value is not None else np.nan for e in estimates]
+        )
+        ends = np.array(
+            [
+                [
+                    100 * ((e.high or e.value or 0) - (e.value or 0)),
+                    100 * ((e.value or 0) - (e.low or e.value or 0)),
+                ]
+                for e in estimates
+            ]
+        ).T
+        lower.errorbar(
+            x, wrong, yerr=np.maximum(ends, 0), fmt="o", color=LIGHT["ink"], elinewidth=1
+        )
+        lower.set_ylim(bottom=0)
+    else:
+        lower.text(0.5, 0.5, "assignment not reported", transform=lower.transAxes, ha="center")
+    lower.set_ylabel("wrong readings of\n0 and 1 (%)")
+    lower.set_xticks(
+        x, [short_name(n, 10) for n in qubits], rotation=90, fontsize=7.5 if wide else 8.5
+    )
+    lower.margins(x=0.02)
+    for place_of, name in zip(x, qubits, strict=True):
+        if name in refused:
+            for axes in (upper, lower):
+                axes.axvspan(
+                    place_of - 0.5, place_of + 0.5, color=LIGHT["hair"], alpha=0.8, linewidth=0
+                )
+    worst = qubits[int(np.nanargmin(apart[:, 0]))] if np.isfinite(apart[:, 0]).any() else "none"
+    return Drawing(
+        figure,
+        OVERVIEW,
+        "Above: distances between class means in units of the clouds' spread; clouds closer than "
+        "about 4 overlap. Below: readings of 0 and 1 that are wrong, with 95 % intervals. Shaded: "
+        f"leaked population not identifiable ({len(refused)} of {len(qubits)}).",
+        f"Separations and wrong readings of {len(qubits)} qubits; 0 and 1 are closest on {worst}.",
+    )
