@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.patches import Circle, Patch, Rectangle
@@ -13,11 +15,17 @@ from leakpipe.report.palette import LIGHT
 from leakpipe.report.wording import decimals_for, percent
 
 TITLE = "Steady leakage on the chip"
-LARGEST = 0.62
+LARGEST = 0.5
 """Radius of the largest symbol; neighbouring qubits stand sqrt 2 apart."""
 
-BARE = 0.5
+BARE = 0.22
 """Radius of the dotted symbol of a qubit whose leakage is not identifiable."""
+
+SQUARE = float(np.sqrt(np.pi))
+"""Side of the square with the area of a circle of radius 1."""
+
+MARGIN = 0.35
+"""Room for the words of the outermost qubits."""
 
 MANY = 24
 """With more qubits than this the map takes the full width."""
@@ -39,28 +47,25 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     if not known:
         raise NothingToDraw(f"no steady leakage per qubit: {levels[0].basis}")
     largest = max(max(level.value or 0.0, level.high or 0.0) for level in known)
-    span = np.ptp(at, axis=0) + 2 * LARGEST + 0.3
+    span = np.ptp(at, axis=0) + 2 * (LARGEST + MARGIN)
     width = FULL if len(qubits) > MANY else COLUMN
     height = min(max(width * span[1] / span[0], 1.1) + 0.75, 9.5)
     figure = canvas(width, height, TITLE, place)
     axes = figure.subplots()
     axes.set_aspect("equal")
     axes.axis("off")
-    low, high = at.min(axis=0) - LARGEST - 0.1, at.max(axis=0) + LARGEST + 0.1
+    low, high = at.min(axis=0) - LARGEST - MARGIN, at.max(axis=0) + LARGEST + MARGIN
     axes.set_xlim(low[0], high[0])
     axes.set_ylim(low[1], high[1])
     _couplers(patch, axes)
     points_per_unit = 72 * min((width - 0.1) / span[0], (height - 0.75) / span[1])
-    size = min(8.0, 0.19 * points_per_unit)
-    for name, level, (x, y), role in zip(
-        qubits,
-        levels,
-        at,
-        ["data"] * len(layout.data) + ["measure"] * len(layout.measure),
-        strict=True,
-    ):
-        _symbol(axes, (x, y), level, role, largest)
-        _words(axes, (x, y), name, level, size)
+    size = min(8.0, 0.17 * points_per_unit)
+    roles = ["data"] * len(layout.data) + ["measure"] * len(layout.measure)
+    for name, level, (x, y), role in zip(qubits, levels, at, roles, strict=True):
+        clear = _symbol(axes, (x, y), level, role, largest)
+        # A square of the same area reaches less far up than a circle.
+        up = clear if role == "data" else clear * SQUARE / 2
+        _words(axes, (x, y), name, level, size, up)
     order = sorted(known, key=lambda level: -(level.value or 0.0))
     worst = qubits[levels.index(order[0])]
     unknown = len(levels) - len(known)
@@ -87,54 +92,59 @@ def _couplers(patch: PatchReport, axes: Axes) -> None:
 
 def _symbol(
     axes: Axes, at: tuple[float, float], level: Estimate, role: str, largest: float
-) -> None:
+) -> float:
+    """Draw one qubit; return the radius its words have to keep clear of."""
     if level.value is None:
-        axes.add_patch(
-            _shape(
-                role, at, BARE, facecolor=LIGHT["surface"], edgecolor=LIGHT["quiet"], linestyle=":"
-            )
-        )
-        return
+        hollow = {"facecolor": LIGHT["surface"], "edgecolor": LIGHT["quiet"], "linestyle": ":"}
+        axes.add_patch(_shape(role, at, BARE, **hollow))
+        return BARE
 
     def radius(amount: float | None) -> float:
         return LARGEST * float(np.sqrt(max(amount or 0.0, 0.0) / largest))
 
+    outermost = radius(max(level.value, level.high or 0.0))
+    paint = LIGHT[role]
+    axes.add_patch(_shape(role, at, outermost, facecolor=LIGHT["surface"], edgecolor="none"))
     axes.add_patch(
-        _shape(role, at, BARE, facecolor=LIGHT["surface"], edgecolor="none", linestyle="-")
-    )
-    axes.add_patch(
-        _shape(role, at, radius(level.value), facecolor=LIGHT[role], edgecolor="none", alpha=0.32)
+        _shape(role, at, radius(level.value), facecolor=paint, edgecolor="none", alpha=0.45)
     )
     for end in (level.low, level.high):
         if end is not None and end > 0:
             axes.add_patch(
-                _shape(role, at, radius(end), fill=False, edgecolor=LIGHT[role], linewidth=0.9)
+                _shape(role, at, radius(end), fill=False, edgecolor=paint, linewidth=0.9)
             )
+    return outermost
 
 
-def _shape(role: str, at: tuple[float, float], radius: float, **look: object) -> Patch:
+def _shape(role: str, at: tuple[float, float], radius: float, **look: Any) -> Patch:
     """Return a circle for a data qubit and a square of the same area for a measure qubit."""
     if role == "data":
-        return Circle(at, radius, zorder=2, **look)  # type: ignore[arg-type]
-    side = radius * float(np.sqrt(np.pi))
+        return Circle(at, radius, zorder=2, **look)
+    side = radius * SQUARE
     corner = (at[0] - side / 2, at[1] - side / 2)
-    return Rectangle(corner, side, side, zorder=2, **look)  # type: ignore[arg-type]
+    return Rectangle(corner, side, side, zorder=2, **look)
 
 
-def _words(axes: Axes, at: tuple[float, float], name: str, level: Estimate, size: float) -> None:
-    """Write name, value and half interval on a qubit."""
-    axes.annotate(
-        short_name(name, 8), at, xytext=(0, 0.68 * size), textcoords="offset points",
-        ha="center", va="center", size=size, weight="bold", zorder=5,
-    )  # fmt: skip
+def _words(
+    axes: Axes, at: tuple[float, float], name: str, level: Estimate, size: float, clear: float
+) -> None:
+    """Write the name above a qubit and value and half interval below it."""
     if level.value is None:
-        said = "?"
+        said = "?" if level.high is None else percent(level).replace("below ", "< ")
     else:
         half = None if level.low is None or level.high is None else 50 * (level.high - level.low)
         digits = decimals_for(100 * level.value, half)
-        spread = "" if half is None else f"±{half:.{digits}f}"
+        spread = "" if half is None else f" ±{half:.{digits}f}"
         said = f"{100 * level.value:.{digits}f}{spread}"
-    axes.annotate(
-        said, at, xytext=(0, -0.62 * size), textcoords="offset points",
-        ha="center", va="center", size=0.88 * size, zorder=5,
-    )  # fmt: skip
+    for words, side, weight in ((short_name(name, 8), 1, "bold"), (said, -1, "normal")):
+        axes.annotate(
+            words,
+            (at[0], at[1] + side * clear),
+            xytext=(0, 2.5 * side),
+            textcoords="offset points",
+            ha="center",
+            va="bottom" if side > 0 else "top",
+            size=size,
+            weight=weight,
+            zorder=5,
+        )

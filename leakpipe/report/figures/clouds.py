@@ -29,7 +29,7 @@ MOST_POINTS = 120
 REACH = 3.2
 """How far beyond the outermost mean a panel reaches, in standard deviations of a cloud."""
 
-GRID = 90
+GRID = 40
 """Grid points per axis for the decision regions."""
 
 
@@ -47,8 +47,8 @@ def plane(means: Array, covariance: Array) -> tuple[Array, Array, Array]:
     -------
     origin, axes, positions
         Mean of state 0 (feature,), the map from features to the plane (feature, 2), and the class
-        means in it (state, 2). State 0 is at the origin, state 1 on the positive first axis, state 2
-        above it; every cloud is a unit circle.
+        means in it (state, 2). State 0 is at the origin, state 1 on the positive first axis, state
+        2 above it; every cloud is a unit circle.
 
     Raises
     ------
@@ -128,10 +128,10 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     return Drawing(
         figure,
         TITLE,
-        "Each panel looks at the plane through a qubit's class means, turned so that 0 (circle) and "
-        "1 (square) lie level, and scaled so that every cloud has a spread of one: the same "
-        "distance is the same distance everywhere. Rings: 2 standard deviations. Shades: which "
-        "label a point gets. Dashes: path of a decay during the readout.",
+        "Each panel looks at the plane through a qubit's class means, turned so that 0 (circle) "
+        "and 1 (square) lie level, and scaled so that every cloud has a spread of one: equal "
+        "lengths mean equal separation. Rings: 2 standard deviations. Shades: which label a point "
+        "gets. Dashes: straight paths of a decay during the readout.",
         f"Readout clouds of {len(qubits)} qubits with their decision regions.",
     )
 
@@ -153,12 +153,13 @@ def _panel(panel: Axes, at: Array, prior: Array) -> None:
     x, y = (np.linspace(middle[i] - side, middle[i] + side, GRID) for i in (0, 1))
     spots = np.stack(np.meshgrid(x, y), axis=-1)
     score = np.log(prior) - 0.5 * ((spots[:, :, None] - at) ** 2).sum(axis=-1)
-    winner = score.argmax(axis=-1)
     for state in range(len(at)):
-        if (winner == state).any():
-            inside = (winner == state).astype(float)
+        # Lead over the best other state: its zero line is the border, straight between two states.
+        others = np.delete(score, state, axis=-1).max(axis=-1)
+        lead = score[..., state] - others
+        if (lead > 0).any():
             panel.contourf(
-                x, y, inside, levels=[0.5, 1.5], colors=[LIGHT[COLORS[state]]], alpha=0.13
+                x, y, lead, levels=[0, np.inf], colors=[LIGHT[COLORS[state]]], alpha=0.13
             )
     for state, spot in enumerate(at):
         color = LIGHT[COLORS[state]]
@@ -217,7 +218,7 @@ def overview(patch: PatchReport, place: str) -> Drawing:
     for column, (words, marker, color) in enumerate(zip(pairs, MARKERS, COLORS, strict=True)):
         upper.plot(x, apart[:, column], marker, color=LIGHT[color], label=words, markersize=4)
     upper.set_ylabel("distance of means\n(std. deviations)")
-    upper.set_ylim(bottom=0)
+    upper.set_ylim(0, 1.12 * max(float(np.nanmax(apart, initial=1.0)), 1.0))
     upper.legend(ncols=3, loc="lower left", bbox_to_anchor=(0, 1), borderaxespad=0.1, fontsize=8.5)
     usable = patch.labels("readout", "usable")
     names = patch.labels("readout", "qubit")

@@ -47,7 +47,8 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     figure = canvas(COLUMN, 3.9, TITLE, place)
     main, strip = figure.subplots(2, 1, sharex=True, height_ratios=(3, 1))
     ends: list[float] = []
-    for row, weight in enumerate(weights):
+    biggest = 2.7
+    for row in range(len(weights)):
         marker = MARKERS[row % len(MARKERS)]
         inner = np.isfinite(mean[row])
         edge = inner & np.isin(layers, (layers.min(), layers.max()))
@@ -71,6 +72,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
                 pull = (mean[row] - expected) / error[row]
             shown = np.isfinite(pull) & ~edge
             shift = 0.16 * (row - (len(weights) - 1) / 2)
+            biggest = max(biggest, float(np.abs(pull[shown]).max(initial=0.0)))
             points(strip, layers[shown] + shift, pull[shown], None, color="measure", marker=marker)
     main.margins(x=0.02, y=0.1)
     bottom, top = main.get_ylim()
@@ -79,8 +81,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
         end_label(main, float(layers.max()), height, f"weight {weight}", "measure")
     strip.axhspan(-2, 2, color=LIGHT["hair"], alpha=0.5, linewidth=0)
     strip.axhline(0, color=LIGHT["quiet"], linewidth=0.8)
-    biggest = max((abs(v) for line in strip.lines for v in line.get_ydata()), default=0.0)  # type: ignore[union-attr]
-    strip.set_ylim(-max(3.0, 1.1 * biggest), max(3.0, 1.1 * biggest))
+    strip.set_ylim(-1.1 * biggest, 1.1 * biggest)
     strip.set_ylabel("residual\n(std. errors)")
     strip.set_xlabel("round (the last layer is the closing readout)")
     main.set_ylabel("detection probability (%)")

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import numpy as np
+from matplotlib.axes import Axes
+from numpy.typing import NDArray
 
 from leakpipe.report.figures.detection import HALF_WIDTH
 from leakpipe.report.figures.style import (
@@ -76,7 +78,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
 
 
 def _curves(
-    patch: PatchReport, axes: object, expected: Array | None
+    patch: PatchReport, axes: Axes, expected: Array | None
 ) -> list[tuple[str, float, float]]:
     """Draw the model per role; return (role, last round, last height in percent)."""
     if expected is None:
@@ -89,9 +91,9 @@ def _curves(
         known = np.isfinite(expected[row])
         if role not in ("data", "measure") or not known.any():
             continue
-        axes.plot(rounds[known], 100 * expected[row, known], color=LIGHT[role], zorder=2)  # type: ignore[attr-defined]
+        axes.plot(rounds[known], 100 * expected[row, known], color=LIGHT[role], zorder=2)
         if low is not None and high is not None:
-            band(axes, rounds, 100 * low[row], 100 * high[row], role)  # type: ignore[arg-type]
+            band(axes, rounds, 100 * low[row], 100 * high[row], role)
         ends.append((role, float(rounds[known][-1]), 100 * float(expected[row, known][-1])))
     return ends
 
@@ -138,11 +140,11 @@ def closing_points(patch: PatchReport) -> tuple[Array, Array, Array, float] | No
     return table[:, 0], table[:, 1], table[:, 2], float(table[:, 3].max())
 
 
-def _plain_rows(patch: PatchReport) -> Array:
+def _plain_rows(patch: PatchReport) -> NDArray[np.bool_]:
     """Return which recordings have no injected qubit (bool over recordings)."""
     count = len(patch.labels("readout", "recording"))
     injected = patch.labels("readout", "injected") or [0] * count
-    return np.asarray(injected) == 0  # type: ignore[return-value]
+    return np.array([int(flag) == 0 for flag in injected], dtype=bool)
 
 
 def _parts(
@@ -156,7 +158,7 @@ def _parts(
     value, shot, calibration = found
     if value is None or not len(patch.labels("readout", "recording")):
         return None
-    keep = _plain_rows(patch).astype(bool)
+    keep = _plain_rows(patch)
     shots = np.asarray(patch.labels("readout", "shots") or np.ones(len(keep)), dtype=float)
     nothing = np.zeros_like(value)
     shot = nothing if shot is None else np.nan_to_num(shot)

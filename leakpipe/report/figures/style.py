@@ -15,6 +15,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
+from matplotlib.layout_engine import ConstrainedLayoutEngine
 from numpy.typing import NDArray
 
 from leakpipe.report.palette import LIGHT, themed
@@ -24,6 +25,9 @@ COLUMN = 5.2
 
 FULL = 7.6
 """Width in inches of a figure that needs the page."""
+
+TITLE_ROOM = 0.42
+"""Height in inches that the title and the line below it take."""
 
 PNG_DPI = 160
 
@@ -91,21 +95,18 @@ def look() -> Iterator[None]:
     """Apply the report's style inside the context, whatever the user's own settings are."""
     with mpl.rc_context():
         mpl.rcdefaults()
-        mpl.rcParams.update(_LOOK)
+        mpl.rcParams.update(_LOOK)  # type: ignore[arg-type]
         yield
 
 
 def canvas(width: float, height: float, title: str, place: str) -> Figure:
     """Return an empty figure with its title and, quieter, which patch and epoch it shows."""
-    figure = Figure(figsize=(width, height), layout="constrained")
+    top = 1 - TITLE_ROOM / height
+    layout = ConstrainedLayoutEngine(rect=(0.005, 0.01, 0.985, top - 0.01))
+    figure = Figure(figsize=(width, height), layout=layout)
     FigureCanvasAgg(figure)
-    room = 0.42
-    top = 1 - room / height
-    figure.get_layout_engine().set(rect=(0.005, 0.01, 0.985, top - 0.01))  # type: ignore[union-attr]
     figure.text(0.012, 1 - 0.17 / height, title, weight="bold", va="center", size=10)
-    figure.text(
-        0.012, 1 - 0.33 / height, place, va="center", size=7.5, color=LIGHT["quiet"], wrap=False
-    )
+    figure.text(0.012, 1 - 0.33 / height, place, va="center", size=7.5, color=LIGHT["quiet"])
     return figure
 
 
@@ -177,7 +178,7 @@ def spread_apart(heights: Sequence[float], least: float) -> list[float]:
             moved[place + 1] += push
     out = np.empty_like(moved)
     out[order] = moved
-    return out.tolist()
+    return [float(height) for height in out]
 
 
 def short_name(name: str, most: int = 14) -> str:
