@@ -106,7 +106,7 @@ class ReadoutQubit:
         """Weights of the device's own integration: a mean without the ring-up, (sample,)."""
         weights = np.ones(self.samples)
         weights[: round(RING_UP_SKIPPED * self.samples)] = 0
-        return weights / weights.sum()
+        return np.asarray(weights / weights.sum())
 
     @property
     def integrated_noise(self) -> float:
@@ -201,6 +201,7 @@ def make_device(
 ) -> dict[str, ReadoutQubit]:
     """Return one readout per qubit name, scattered around a reference."""
     device = {}
+    _, one, two = reference.pulls_mhz
     for name in names:
         t1, noise, pulls = np.exp(
             rng.standard_normal(3) * np.array([spread.t1, spread.noise, spread.pulls])
@@ -211,7 +212,7 @@ def make_device(
             reference,
             t1_us=reference.t1_us * float(t1),
             noise=reference.noise * float(noise),
-            pulls_mhz=(0.0, *(float(pulls) * pull for pull in reference.pulls_mhz[1:])),
+            pulls_mhz=(0.0, float(pulls) * one, float(pulls) * two),
             phase_degrees=float(phase) if spread.phase else reference.phase_degrees,
             offset=complex(*offset),
         )
