@@ -98,7 +98,7 @@ def run_log_block(summary: Mapping[str, Any], changes: Sequence[Finding] | None 
         text = _of_severity(summary, severity, changes or ())
         if text:
             parts.append(_Part(severity, text, most, order))
-    parts.append(_Part("changed", _changed(changes), 3, 5))
+    parts.append(_Part("changed", changed_words(changes), 3, 5))
     cannot = attention.unknowns(summary)
     if cannot:
         names = listed(_unique([one.quantity for one in cannot]))
@@ -217,10 +217,10 @@ def _of_severity(summary: Mapping[str, Any], severity: str, changes: Sequence[Fi
         for finding in summary["findings"]
         if finding["severity"] == severity and (finding["code"], finding["where"]) not in told
     ]
-    return " ".join(_placed(finding["where"], finding["sentence"]) for finding in found)
+    return " ".join(placed(finding["where"], finding["sentence"]) for finding in found)
 
 
-def _placed(where: str, sentence: str) -> str:
+def placed(where: str, sentence: str) -> str:
     """Return the sentence with its place in front, unless it begins with it anyway."""
     said = _sentence(sentence)
     return said if said.startswith(where) else f"{where}: {said}"
@@ -231,12 +231,13 @@ def _sentence(text: str) -> str:
     return text if text.endswith((".", "!", "?")) else f"{text}."
 
 
-def _changed(changes: Sequence[Finding] | None) -> str:
+def changed_words(changes: Sequence[Finding] | None) -> str:
+    """Return what moved since the last calibration, in words."""
     if changes is None:
         return "no earlier epoch to compare with."
     if not changes:
         return "nothing beyond noise since the last calibration."
-    return " ".join(_placed(change.where, change.sentence) for change in changes)
+    return " ".join(placed(change.where, change.sentence) for change in changes)
 
 
 def json_line(summary: Mapping[str, Any]) -> str:

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import io
-import re
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -18,7 +16,7 @@ from matplotlib.figure import Figure
 from matplotlib.layout_engine import ConstrainedLayoutEngine
 from numpy.typing import NDArray
 
-from leakpipe.report.palette import LIGHT, themed
+from leakpipe.report.palette import LIGHT
 
 COLUMN = 5.2
 """Width in inches of a figure that fits one column, and a phone at its own size."""
@@ -187,27 +185,12 @@ def short_name(name: str, most: int = 14) -> str:
 
 
 def write(figure: Figure, stem: Path) -> tuple[Path, Path]:
-    """Write a figure as SVG (colours as CSS variables, own ids) and PNG beside each other.
+    """Write a figure as SVG and PNG beside each other.
 
-    Call it inside `look()`. The SVG depends on the data only, not on the time or the machine.
+    Call it inside `look()`. The files depend on the data only, not on the time or the machine.
     """
     svg, png = stem.with_suffix(".svg"), stem.with_suffix(".png")
-    text = io.StringIO()
     with mpl.rc_context({"svg.hashsalt": stem.name}):
-        figure.savefig(text, format="svg", metadata={"Date": None, "Creator": None})
-    svg.write_text(_own_ids(_themed_styles(text.getvalue()), stem.name), encoding="utf-8")
+        figure.savefig(svg, format="svg", metadata={"Date": None, "Creator": None})
     figure.savefig(png, format="png", dpi=PNG_DPI, metadata={"Software": None})
     return svg, png
-
-
-def _themed_styles(svg: str) -> str:
-    """Put CSS variables for palette colours into style attributes, and only there."""
-    return re.sub(r'(style="[^"]*")', lambda match: themed(match.group()), svg)
-
-
-def _own_ids(svg: str, name: str) -> str:
-    """Prefix every id, so that several figures can stand in one page."""
-    prefix = re.sub(r"[^A-Za-z0-9-]+", "-", name)
-    svg = re.sub(r'(<[^>]*?\bid=")', lambda match: f"{match.group()}{prefix}-", svg)
-    svg = re.sub(r'(href="#)', lambda match: f"{match.group()}{prefix}-", svg)
-    return re.sub(r"(url\(#)", lambda match: f"{match.group()}{prefix}-", svg)
