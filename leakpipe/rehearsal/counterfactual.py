@@ -1,0 +1,233 @@
+"""Truth that only a simulation with many shots can tell: logical error and leakage's share.
+
+The share is (eps with - eps without) / eps with, where "without" is the same device, read and
+decoded alike, that has no way to leak.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from leakpipe.codes.events import bits_of, detection_events, logical_parity
+from leakpipe.codes.layout import Basis, Layout
+from leakpipe.rehearsal.labels import misread
+from leakpipe.rehearsal.memory import MemoryShots, simulate
+from leakpipe.rehearsal.noise import MemoryNoise
+
+CHUNK = 1 << 14
+"""Shots simulated and decoded at a time, to bound memory."""
+
+Decode = Callable[[NDArray[np.uint8]], NDArray[np.uint8]]
+"""Events (shot, layer, check) to the predicted flip of the logical value, (shot,)."""
+
+DecoderFor = Callable[[int], Decode]
+"""Number of rounds to the decoder of its recordings."""
+
+
+@dataclass(frozen=True)
+class Setting:
+    """A memory as it is run and read.
+
+    Attributes
+    ----------
+    layout, basis, reset
+        Code, basis, and whether measure qubits are reset before every round.
+    noise
+        Errors and leakage.
+    table
+        (D + M, 3, 3) label given true state, or None for perfect readout.
+    """
+
+    layout: Layout
+    basis: Basis
+    noise: MemoryNoise
+    table: NDArray[np.float64] | None = None
+    reset: bool = True
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What happened in many shots of one number of rounds.
+
+    Attributes
+    ----------
+    rounds, shots, failures
+        R, shots, and shots in which the decoder ended on the wrong logical value.
+    detection
+        (layer, check) detection probability.
+    leaked
+        (round, D + M) leaked population.
+    """
+
+    rounds: int
+    shots: int
+    failures: int
+    detection: NDArray[np.float64]
+    leaked: NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class PerRound:
+    """Fit of 1 - 2 P(R) = A (1 - 2 eps)^R.
+
+    Attributes
+    ----------
+    value, error
+        Logical error per round and its standard error.
+    amplitude
+        A.
+    chi_square, freedom
+        Of the fit. Under leakage the curve is not exactly exponential.
+    """
+
+    value: float
+    error: float
+    amplitude: float
+    chi_square: float
+    freedom: int
+
+
+def labelled(
+    setting: Setting, memory: MemoryShots, rng: np.random.Generator
+) -> tuple[NDArray[np.uint8], NDArray[np.uint8]]:
+    """Return the states and closing states as they are read."""
+    if setting.table is None:
+        return memory.states, memory.final_states
+    data = len(setting.layout.data)
+    return (
+        misread(memory.states, setting.table[data:], rng),
+        misread(memory.final_states, setting.table[:data], rng),
+    )
+
+
+def failed(
+    setting: Setting,
+    states: NDArray[np.uint8],
+    final_states: NDArray[np.uint8],
+    prepared: NDArray[np.uint8],
+    decode: Decode,
+) -> tuple[NDArray[np.uint8], NDArray[np.uint8]]:
+    """Return which shots end on the wrong logical value, (shot,), and their detection events."""
+    closing = bits_of(final_states)
+    events = detection_events(
+        bits_of(states), closing, prepared, setting.layout, setting.basis, reset=setting.reset
+    )
+    flips = logical_parity(closing ^ prepared, setting.layout, setting.basis)
+    return flips ^ decode(events), events
+
+
+def run_many(
+    setting: Setting, rounds: int, shots: int, decode: Decode, rng: np.random.Generator
+) -> Outcome:
+    """Simulate, read and decode many shots of one number of rounds."""
+    layout = setting.layout
+    wrong = 0
+    fired = np.zeros((rounds + 1, len(layout.measure)))
+    leaked = np.zeros((rounds, len(layout.data) + len(layout.measure)))
+    for first in range(0, shots, CHUNK):
+        count = min(CHUNK, shots - first)
+        memory = simulate(
+            layout, setting.basis, rounds, count, setting.noise, rng, reset=setting.reset
+        )
+        states, final_states = labelled(setting, memory, rng)
+        bad, events = failed(setting, states, final_states, memory.prepared, decode)
+        wrong += int(bad.sum())
+        fired += events.sum(axis=0)
+        leaked += memory.leaked * count
+    return Outcome(rounds, shots, wrong, fired / shots, leaked / shots)
+
+
+def fit_per_round(outcomes: Sequence[Outcome]) -> PerRound:
+    """Fit the logical error per round; R = 1 is left out where others remain.
+
+    Weighted least squares on P(R) with binomial errors of the fitted curve, iterated.
+
+    Raises
+    ------
+    ValueError
+        Fewer than two numbers of rounds remain.
+    """
+    from scipy.optimize import curve_fit
+
+    used = [one for one in outcomes if one.rounds > 1] or list(outcomes)
+    rounds = np.array([one.rounds for one in used], dtype=float)
+    shots = np.array([one.shots for one in used], dtype=float)
+    seen = np.array([one.failures for one in used]) / shots
+    if len(set(rounds)) < 2:
+        raise ValueError("a logical error per round needs two numbers of rounds")
+
+    def curve(turns: NDArray[np.float64], log_keep: float, log_start: float) -> NDArray[np.float64]:
+        return np.asarray((1 - np.exp(log_start + log_keep * turns)) / 2)
+
+    guess = (float(np.log(np.clip(1 - 2 * seen[-1], 0.02, 0.999)) / rounds[-1]), 0.0)
+    model = (seen * shots + 1) / (shots + 2)
+    for _ in range(3):  # the weights settle at once, as they hardly depend on the fit
+        spread = np.sqrt(model * (1 - model) / shots)
+        guess, covariance = curve_fit(curve, rounds, seen, guess, spread, absolute_sigma=True)
+        model = np.clip(curve(rounds, *guess), 1e-9, 1 - 1e-9)
+    keep = float(np.exp(guess[0]))
+    return PerRound(
+        value=(1 - keep) / 2,
+        error=keep / 2 * float(np.sqrt(covariance[0, 0])),
+        amplitude=float(np.exp(guess[1])),
+        chi_square=float((((seen - model) / spread) ** 2).sum()),
+        freedom=len(rounds) - 2,
+    )
+
+
+@dataclass(frozen=True)
+class Share:
+    """Leakage's share of the logical error per round, by counterfactual.
+
+    Attributes
+    ----------
+    value, error
+        Share and its standard error.
+    with_leakage, without
+        The two logical errors per round.
+    outcomes, outcomes_without
+        What was simulated for them.
+    """
+
+    value: float
+    error: float
+    with_leakage: PerRound
+    without: PerRound
+    outcomes: tuple[Outcome, ...]
+    outcomes_without: tuple[Outcome, ...]
+
+
+def share_truth(
+    setting: Setting,
+    rounds: Sequence[int],
+    shots: int,
+    decoder_for: DecoderFor,
+    rng: np.random.Generator,
+) -> Share:
+    """Return the share of the logical error per round that leakage causes.
+
+    Parameters
+    ----------
+    setting
+        The memory with its leakage.
+    rounds, shots
+        Numbers of rounds, and shots of each, with and without leakage.
+    decoder_for
+        The decoder of both.
+    """
+    from dataclasses import replace
+
+    quiet = replace(setting, noise=setting.noise.without_injection())
+    decoders = {turns: decoder_for(turns) for turns in rounds}
+    outcomes, without = (
+        tuple(run_many(one, turns, shots, decoders[turns], rng) for turns in rounds)
+        for one in (setting, quiet)
+    )
+    first, second = fit_per_round(outcomes), fit_per_round(without)
+    ratio = second.value / first.value
+    spread = ratio * np.hypot(first.error / first.value, second.error / second.value)
+    return Share(1 - ratio, float(spread), first, second, outcomes, without)

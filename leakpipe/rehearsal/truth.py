@@ -1,0 +1,213 @@
+"""The truth written beside rehearsed recordings, under the names that results use.
+
+Every quantity is a value with the error with which the rehearsal itself knows it: 0 for closed
+forms, a standard error for what was simulated, None with a reason where it has no truth.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from leakpipe.codes.events import defined_layers
+from leakpipe.codes.layout import Basis, Layout
+from leakpipe.rehearsal.counterfactual import DecoderFor, Outcome, Setting, Share, share_truth
+from leakpipe.rehearsal.labels import assignments
+from leakpipe.rehearsal.populations import LeakageRates, expected_leaked, leakage_rates
+from leakpipe.rehearsal.readout import jump_probability
+from leakpipe.rehearsal.scenario import Scenario
+from leakpipe.rehearsal.season import TRUTH, Epoch, stream
+
+DEFINITIONS = {
+    "leaked": "population outside 0 and 1 at the end of a round, when the qubit is read",
+    "injection": "G of p[r+1] = p[r] + G (1 - p[r]) - S p[r], per round; of a role: mean of qubits",
+    "seepage": "S of the same recurrence; of a role: mean of its qubits",
+    "steady_leakage": "G / (G + S); of a role: mean of its qubits",
+    "settling_rounds": "-1 / ln(1 - G - S); of the code: the time at which the leaked data and "
+    "measure population together has covered 1 - 1/e of its way to the steady level",
+    "detection_rise": "(d[settled] - d[start]) / d[start] of the mean over checks; start: the law "
+    "of the settling continued to round 0, settled: continued to infinity",
+    "logical_error_per_round": "1 - 2 P(R) = A (1 - 2 eps)^R over the recordings' R, R = 1 left "
+    "out; hard labels of the device, matching decoder",
+    "leakage_share": "(eps with - eps without) / eps with, same decoder, injection set to zero",
+    "kappa": "2 v, v the probability that a leaked qubit flips the outcome of its check",
+}
+
+
+@dataclass(frozen=True)
+class Known:
+    """A true value and the error with which the rehearsal knows it."""
+
+    value: float | None
+    error: float | None = 0.0
+    reason: str = ""
+
+    def to_json(self) -> dict[str, Any]:
+        """Return the value as `truth.json` writes it."""
+        finite = self.value is not None and np.isfinite(self.value)
+        entry: dict[str, Any] = {
+            "value": float(self.value) if finite and self.value is not None else None,
+            "error": None if self.error is None or not finite else float(self.error),
+        }
+        return entry | ({"reason": self.reason} if self.reason else {})
+
+
+def code_settling(rates: LeakageRates) -> float:
+    """Return the time in which the summed leaked population covers 1 - 1/e of its way, in rounds.
+
+    Qubits whose level is high weigh more; with equal rates it is the common settling time.
+    """
+    from scipy.optimize import brentq
+
+    level = rates.steady_leakage
+    keep = np.clip(1 - rates.injection - rates.seepage, 0, 1)
+    if level.sum() == 0:
+        return float("nan")
+
+    def left(rounds: float) -> float:
+        return float((level * keep**rounds).sum() / level.sum() - np.exp(-1))
+
+    longest = float(rates.settling_rounds[level > 0].max())
+    if not np.isfinite(longest):
+        return float("inf")
+    return float(brentq(left, 0.0, 50 * max(longest, 1e-3)))
+
+
+def detection_rise(outcome: Outcome, layout: Layout, basis: Basis, settling: float) -> Known:
+    """Return the relative rise of the mean detection probability over interior layers 2..R.
+
+    A linear fit of d[r] = A - B lam^r with the known settling time. The error takes the layers'
+    means as independent binomials, checks and layers alike.
+    """
+    rounds = outcome.rounds
+    if rounds < 4 or not np.isfinite(settling) or settling <= 0:
+        return Known(None, None, "needs four rounds and a settling time")
+    inside = defined_layers(layout, basis, rounds)[1:rounds]
+    probability = outcome.detection[1:rounds]
+    mean = probability.mean(axis=1)
+    assert inside.all()
+    spread = np.sqrt((probability * (1 - probability)).sum(axis=1) / outcome.shots)
+    spread /= probability.shape[1]
+    turns = np.arange(2, rounds + 1)
+    design = np.stack([np.ones(rounds - 1), -np.exp(-turns / settling)], axis=1)
+    scaled = design / spread[:, None]
+    covariance = np.linalg.inv(scaled.T @ scaled)
+    level, size = covariance @ scaled.T @ (mean / spread)
+    start = level - size
+    # d(size / start) = d size / start - size (d level - d size) / start^2
+    slope = np.array([-size / start**2, 1 / start + size / start**2])
+    return Known(float(size / start), float(np.sqrt(slope @ covariance @ slope)))
+
+
+def patch_truth(
+    scenario: Scenario, epoch: Epoch, layout: Layout, basis: Basis, decoder_for: DecoderFor | None
+) -> dict[str, Any]:
+    """Return the truth of one epoch and basis, in the shape of a patch of `summary.json`."""
+    reset = scenario.reset == "each round"
+    rng = stream(scenario, TRUTH, epoch.number, 0 if basis == "Z" else 1)
+    names = [*layout.data, *layout.measure]
+    rates = leakage_rates(layout, epoch.noise, reset=reset)
+    table = assignments([epoch.running[name] for name in names], scenario.truth.readout_shots, rng)
+    setting = Setting(layout, basis, epoch.noise, table, reset)
+    path = expected_leaked(layout, epoch.noise, max(scenario.rounds), reset=reset)
+    data = len(layout.data)
+    roles = {"data": slice(0, data), "measure": slice(data, None)}
+    settling = code_settling(rates)
+    coupled = epoch.noise.transport > 0
+    reason = "transport couples the qubits: rates without their partners" if coupled else ""
+
+    def mean_of(values: NDArray[np.float64]) -> dict[str, Any]:
+        return {
+            role: Known(float(values[part].mean()), 0.0, reason).to_json()
+            for role, part in roles.items()
+        }
+
+    entry: dict[str, Any] = {
+        "patch": scenario.patch,
+        "family": layout.family,
+        "distance": layout.distance,
+        "basis": basis,
+        "rounds": sorted(scenario.rounds),
+        "settling_rounds": Known(settling, 0.0, reason).to_json(),
+        "kappa": Known(_kappa(layout, epoch)).to_json(),
+        "steady_leakage": mean_of(rates.steady_leakage),
+        "injection": mean_of(rates.injection),
+        "seepage": mean_of(rates.seepage),
+        "qubits": [
+            _qubit(epoch, names, index, data, rates, table, path) for index in range(len(names))
+        ],
+        "leaked_by_round": {
+            role: path[:, part].mean(axis=1).tolist() for role, part in roles.items()
+        },
+    }
+    share = None
+    if decoder_for is not None and scenario.truth.shots and len(set(scenario.rounds) - {1}) > 1:
+        share = share_truth(
+            setting, sorted(set(scenario.rounds)), scenario.truth.shots, decoder_for, rng
+        )
+    return entry | _logical(share, layout, basis, settling)
+
+
+def _kappa(layout: Layout, epoch: Epoch) -> float:
+    """Surface checks of a leaked qubit are fair coins, repetition checks flip with strength / 2."""
+    return 1.0 if layout.family == "rotated surface" else epoch.noise.strength
+
+
+def _qubit(
+    epoch: Epoch,
+    names: list[str],
+    index: int,
+    data: int,
+    rates: LeakageRates,
+    table: NDArray[np.float64],
+    path: NDArray[np.float64],
+) -> dict[str, Any]:
+    readout = epoch.running[names[index]]
+    shown = {
+        name: Known(float(getattr(rates, name)[index])).to_json()
+        for name in ("steady_leakage", "injection", "seepage", "settling_rounds")
+    }
+    return {
+        "qubit": names[index],
+        "role": "data" if index < data else "measure",
+        **shown,
+        "leaked_at_last_round": float(path[-1, index]),
+        "assignment": float(np.diagonal(table[index]).mean()),
+        "assignment_matrix": table[index].tolist(),
+        "separations": readout.separations.tolist(),
+        "jump_probability": jump_probability(readout).tolist(),
+        "t1_us": readout.t1_us,
+    }
+
+
+def _logical(share: Share | None, layout: Layout, basis: Basis, settling: float) -> dict[str, Any]:
+    if share is None:
+        missing = Known(None, None, "not simulated").to_json()
+        names = ("logical_error_per_round", "leakage_share", "detection_rise")
+        return dict.fromkeys(names, missing)
+    longest = max(share.outcomes, key=lambda one: one.rounds)
+    fits = share.with_leakage, share.without
+    return {
+        "logical_error_per_round": Known(fits[0].value, fits[0].error).to_json(),
+        "logical_error_per_round_without": Known(fits[1].value, fits[1].error).to_json(),
+        "leakage_share": Known(share.value, share.error).to_json(),
+        "detection_rise": detection_rise(longest, layout, basis, settling).to_json(),
+        "logical_fit": [
+            {"chi_square": fit.chi_square, "freedom": fit.freedom, "amplitude": fit.amplitude}
+            for fit in fits
+        ],
+        "logical_error": {
+            name: [
+                {"rounds": one.rounds, "shots": one.shots, "failures": one.failures}
+                for one in outcomes
+            ]
+            for name, outcomes in (
+                ("with", share.outcomes),
+                ("without", share.outcomes_without),
+            )
+        },
+        "mean_detection_by_layer": longest.detection.mean(axis=1).tolist(),
+    }
