@@ -118,11 +118,8 @@ def _code(mine: Mapping[tuple[str, str], _Series]) -> list[dict[str, Any]]:
             continue
         one = mine[quantity, qubit]
         values = [m.estimate.value for m in one.moments if m.estimate.value is not None]
-        ends = (
-            [_words(quantity, Estimate(end, None, None)) for end in (min(values), max(values))]
-            if values
-            else []
-        )
+        ends = [min(values), max(values)] if values else []
+        reach = [_words(quantity, Estimate(end, None, None)) for end in ends]
         shown.append(
             {
                 "title": _title(quantity),

@@ -95,7 +95,11 @@ def page(
                 (
                     severity,
                     meaning,
-                    [one for one in summary["findings"] if one["severity"] == severity],
+                    [
+                        {"words": placed(one["where"], one["sentence"]), "code": one["code"]}
+                        for one in summary["findings"]
+                        if one["severity"] == severity
+                    ],
                 )
                 for severity, meaning in MEANINGS.items()
             ],
@@ -110,8 +114,17 @@ def page(
 def _first(summary: Mapping[str, Any], patches: Sequence[PatchReport]) -> list[_Item]:
     """Return findings to act on, then the qubits that stand out with the couplers to look at."""
     act = [finding for finding in summary["findings"] if finding["severity"] == "act"]
-    items = [_Item(placed(finding["where"], finding["sentence"]), "act") for finding in act]
-    for one, bases in attention.joined(summary):
+    odd = attention.joined(summary)
+    items = []
+    for finding in act:
+        about = [one for one, _ in odd if finding["where"].split(": ")[-1] == one.qubit]
+        couplers = _couplers(about[0], patches) if about else ""
+        said = placed(finding["where"], finding["sentence"])
+        items.append(_Item(f"{said}{couplers}", "act"))
+    told = {finding["where"].split(": ")[-1] for finding in act}
+    for one, bases in odd:
+        if one.qubit in told:
+            continue
         seen = f" Seen in {' and '.join(bases)}." if len(summary["patches"]) > 1 else ""
         items.append(
             _Item(

@@ -17,9 +17,10 @@ from leakpipe.report.wording import in_rounds, number, percent
 
 @dataclass(frozen=True)
 class Cell:
-    """One cell: its words, what it sorts by, whether it is known, and an optional bar."""
+    """One cell: words, interval, what it sorts by, whether it is known, and an optional bar."""
 
     words: str
+    interval: str = ""
     sort: str = ""
     known: bool = True
     place: str = ""
@@ -49,7 +50,9 @@ def _cell(
     estimate: Estimate, words: Callable[[Estimate], str], place: str = "", bar: Markup | None = None
 ) -> Cell:
     sort = "" if estimate.value is None else repr(float(estimate.value))
-    return Cell(words(estimate), sort, estimate.identifiable, place, bar)
+    said, bracket, interval = words(estimate).partition(" (")
+    ends = f"({interval}" if bracket else ""
+    return Cell(said, ends, sort, estimate.identifiable, place, bar)
 
 
 def _signed(estimate: Estimate) -> str:
@@ -101,7 +104,7 @@ def qubit_tables(summary: Mapping[str, Any], patches: Sequence[PatchReport]) -> 
             "right readings",
         ]
         if worst:
-            heads.append("is the worst")
+            heads.append("chance to be the worst")
         tops = [qubit["steady_leakage"]["high"] or 0.0 for qubit in part["qubits"]]
         largest = max(tops, default=0.0)
         rows = [_row(qubit, largest, odd, worst) for qubit in part["qubits"]]
@@ -130,7 +133,7 @@ def _row(
         cells.append(
             Cell("not known", known=False)
             if chance is None
-            else Cell(_chance(chance), repr(float(chance)))
+            else Cell(_chance(chance), sort=repr(float(chance)))
         )
     return QubitRow(qubit["qubit"], qubit["role"], qubit["qubit"] in odd, cells)
 
