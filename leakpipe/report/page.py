@@ -35,6 +35,9 @@ MEANINGS = {
     "note": "good to know",
 }
 
+OF_THE_MODEL = "readout-clouds"
+"""The one figure that shows nothing but the readout model, which the bases of an epoch share."""
+
 CAUTIONS = (
     CAUTION,
     "Leakage is taken as rare, independent episodes with geometric lifetimes on a device that is "
@@ -88,7 +91,7 @@ def page(
             "first": _first(summary, patches),
             "nothing_first": _nothing_first(summary),
             "changed": changed_words(changes),
-            "figure_groups": _figure_groups(figures),
+            "figure_groups": _figure_groups(figures, patches),
             "qubit_tables": tables.qubit_tables(summary, patches),
             "routes": tables.routes(summary),
             "findings": [
@@ -157,12 +160,18 @@ def _nothing_first(summary: Mapping[str, Any]) -> str:
     return "No finding asks to act. No qubit can be named: leakage per qubit is not identifiable."
 
 
-def _figure_groups(figures: Sequence[FigureFile]) -> list[tuple[str, list[dict[str, Any]]]]:
+def _figure_groups(
+    figures: Sequence[FigureFile], patches: Sequence[PatchReport]
+) -> list[tuple[str, list[dict[str, Any]]]]:
+    """Return the figures per patch and basis, without repeating what two bases share."""
     groups: dict[str, list[dict[str, Any]]] = {}
-    for place, figure in enumerate(figures):
+    repeated = _places_with_known_model(patches)
+    for number, figure in enumerate(figures):
+        if figure.name == OF_THE_MODEL and figure.place in repeated:
+            continue
         svg: Markup | None = None
         if figure.svg is not None:
-            svg = inline(figure.svg, figure.alt, f"f{place}")
+            svg = inline(figure.svg, figure.alt, f"f{number}")
         groups.setdefault(figure.place, []).append(
             {
                 "title": figure.title,
@@ -173,6 +182,21 @@ def _figure_groups(figures: Sequence[FigureFile]) -> list[tuple[str, list[dict[s
             }
         )
     return list(groups.items())
+
+
+def _places_with_known_model(patches: Sequence[PatchReport]) -> set[str]:
+    """Return the patches and bases whose readout model an earlier one has shown already."""
+    shown: list[Any] = []
+    places = set()
+    for patch in patches:
+        model = patch.stage("model")
+        if model is None:
+            continue
+        if any(model.identical(other) for other in shown):
+            places.add(patch.label)
+        else:
+            shown.append(model)
+    return places
 
 
 def _provenance(

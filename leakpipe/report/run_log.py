@@ -45,7 +45,7 @@ def verdict(summary: Mapping[str, Any]) -> tuple[str, str]:
     act = [finding for finding in summary["findings"] if finding["severity"] == "act"]
     watch = [finding for finding in summary["findings"] if finding["severity"] == "watch"]
     if act:
-        where = listed(_unique([finding["where"] for finding in act]), most=3)
+        where = listed(_unique([finding["where"].split(": ")[-1] for finding in act]), most=3)
         also = f", {len(watch)} to watch" if watch else ""
         return "ACT", f"look at {where} first: {plural(len(act), 'finding')} to act on{also}."
     if _blind(summary):
@@ -221,9 +221,14 @@ def _of_severity(summary: Mapping[str, Any], severity: str, changes: Sequence[Fi
 
 
 def placed(where: str, sentence: str) -> str:
-    """Return the sentence with its place in front, unless it begins with it anyway."""
+    """Return the sentence with its place in front, as far as it does not begin with it anyway."""
     said = _sentence(sentence)
-    return said if said.startswith(where) else f"{where}: {said}"
+    head, separator, tail = where.rpartition(": ")
+    if said.startswith(where):
+        return said
+    if separator and said.startswith(tail):
+        return f"{head}: {said}"
+    return f"{where}: {said}"
 
 
 def _sentence(text: str) -> str:

@@ -47,22 +47,25 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     if not known:
         raise NothingToDraw(f"no steady leakage per qubit: {levels[0].basis}")
     largest = max(max(level.value or 0.0, level.high or 0.0) for level in known)
-    span = np.ptp(at, axis=0) + 2 * (LARGEST + MARGIN)
+    radii = np.array([_reach(level, largest) for level in levels])[:, None]
+    low, high = (at - radii - MARGIN).min(axis=0), (at + radii + MARGIN).max(axis=0)
+    span = high - low
     width = FULL if len(qubits) > MANY else COLUMN
     height = min(max(width * span[1] / span[0], 1.1) + 0.75, 9.5)
     figure = canvas(width, height, TITLE, place)
     axes = figure.subplots()
     axes.set_aspect("equal")
     axes.axis("off")
-    low, high = at.min(axis=0) - LARGEST - MARGIN, at.max(axis=0) + LARGEST + MARGIN
     axes.set_xlim(low[0], high[0])
     axes.set_ylim(low[1], high[1])
     _couplers(patch, axes)
     points_per_unit = 72 * min((width - 0.1) / span[0], (height - 0.75) / span[1])
     size = min(8.0, 0.17 * points_per_unit)
     roles = ["data"] * len(layout.data) + ["measure"] * len(layout.measure)
-    for name, level, (x, y), role in zip(qubits, levels, at, roles, strict=True):
-        clear = _symbol(axes, (x, y), level, role, largest)
+    for name, level, (x, y), role, clear in zip(
+        qubits, levels, at, roles, radii.ravel().tolist(), strict=True
+    ):
+        _symbol(axes, (x, y), level, role, largest)
         # A square of the same area reaches less far up than a circle.
         up = clear if role == "data" else clear * SQUARE / 2
         _words(axes, (x, y), name, level, size, up)
@@ -90,30 +93,34 @@ def _couplers(patch: PatchReport, axes: Axes) -> None:
             axes.plot(*zip(start, end, strict=True), color=LIGHT["hair"], linewidth=1.0, zorder=1)
 
 
+def _radius(amount: float | None, largest: float) -> float:
+    """Return the radius of a symbol whose area stands for `amount`."""
+    return LARGEST * float(np.sqrt(max(amount or 0.0, 0.0) / largest))
+
+
+def _reach(level: Estimate, largest: float) -> float:
+    """Return the radius that a qubit's words have to keep clear of."""
+    if level.value is None:
+        return BARE
+    return _radius(max(level.value, level.high or 0.0), largest)
+
+
 def _symbol(
     axes: Axes, at: tuple[float, float], level: Estimate, role: str, largest: float
-) -> float:
-    """Draw one qubit; return the radius its words have to keep clear of."""
+) -> None:
+    reach = _reach(level, largest)
     if level.value is None:
         hollow = {"facecolor": LIGHT["surface"], "edgecolor": LIGHT["quiet"], "linestyle": ":"}
-        axes.add_patch(_shape(role, at, BARE, **hollow))
-        return BARE
-
-    def radius(amount: float | None) -> float:
-        return LARGEST * float(np.sqrt(max(amount or 0.0, 0.0) / largest))
-
-    outermost = radius(max(level.value, level.high or 0.0))
+        axes.add_patch(_shape(role, at, reach, **hollow))
+        return
     paint = LIGHT[role]
-    axes.add_patch(_shape(role, at, outermost, facecolor=LIGHT["surface"], edgecolor="none"))
-    axes.add_patch(
-        _shape(role, at, radius(level.value), facecolor=paint, edgecolor="none", alpha=0.45)
-    )
+    axes.add_patch(_shape(role, at, reach, facecolor=LIGHT["surface"], edgecolor="none"))
+    radius = _radius(level.value, largest)
+    axes.add_patch(_shape(role, at, radius, facecolor=paint, edgecolor="none", alpha=0.45))
     for end in (level.low, level.high):
         if end is not None and end > 0:
-            axes.add_patch(
-                _shape(role, at, radius(end), fill=False, edgecolor=paint, linewidth=0.9)
-            )
-    return outermost
+            look = {"fill": False, "edgecolor": paint, "linewidth": 0.9}
+            axes.add_patch(_shape(role, at, _radius(end, largest), **look))
 
 
 def _shape(role: str, at: tuple[float, float], radius: float, **look: Any) -> Patch:
