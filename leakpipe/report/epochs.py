@@ -10,7 +10,7 @@ from markupsafe import Markup
 
 from leakpipe.estimates import Estimate
 from leakpipe.findings import Finding
-from leakpipe.report.marks import Moment, trend
+from leakpipe.report.marks import LOW, TALL, Moment, trend
 from leakpipe.report.web import CAUTION, capitalised, rendered
 from leakpipe.report.wording import in_rounds, listed, moment, number, percent
 
@@ -83,7 +83,9 @@ def _series(
         estimate = Estimate(
             row["value"], row["low"], row["high"], identifiable=row["value"] is not None
         )
-        found.setdefault(key, {})[str(row["epoch"])] = Moment(estimate, bool(row.get("flags")))
+        epoch, when = str(row["epoch"]), moment(str(row["acquired_at"]))
+        words = f"{epoch}, {when}: {_words(key[1], estimate)}"
+        found.setdefault(key, {})[epoch] = Moment(estimate, bool(row.get("flags")), words)
     gap = Moment(Estimate.unknown("no result in this epoch"))
     return {
         key: _Series(
@@ -120,12 +122,15 @@ def _code(mine: Mapping[tuple[str, str], _Series]) -> list[dict[str, Any]]:
         values = [m.estimate.value for m in one.moments if m.estimate.value is not None]
         ends = [min(values), max(values)] if values else []
         reach = [_words(quantity, Estimate(end, None, None)) for end in ends]
+        if len(reach) > 1:
+            # The unit once, at the end.
+            reach[0] = reach[0].split(" ")[0]
         shown.append(
             {
                 "title": _title(quantity),
-                "svg": trend(one.moments, "data"),
+                "svg": trend(one.moments, "data", TALL, reach[-1] if reach else ""),
                 "last": _words(quantity, one.last),
-                "range": " to ".join(dict.fromkeys(reach)) if reach else "none known",
+                "range": " to ".join(reach) if reach else "none known",
                 "flagged": listed(one.flagged),
             }
         )
@@ -141,7 +146,7 @@ def _qubits(mine: Mapping[tuple[str, str], _Series]) -> list[tuple[str, list[dic
             if name != quantity or not qubit:
                 continue
             one = mine[name, qubit]
-            svg: Markup = trend(one.moments, "data")
+            svg: Markup = trend(one.moments, "data", LOW)
             rows.append(
                 {
                     "qubit": qubit,

@@ -63,11 +63,8 @@ def test_changes_are_told_apart(patch):
 @pytest.mark.parametrize("count", [1, 2, 5, 12])
 def test_frame_holds_for_many_patches(name, count):
     """Up to a dozen patches and bases and 49 qubits, the block stays 25 lines of 78 columns."""
-    layout = layouts()[name]
-    patches = [
-        replace(patch_report(layout=layout, basis="ZX"[i % 2]), patch=f"patch {i // 2}")
-        for i in range(count)
-    ]
+    one = patch_report(layout=layouts()[name])
+    patches = [replace(one, basis="ZX"[i % 2], patch=f"patch {i // 2}") for i in range(count)]
     block = run_log_block(summary(patches))
     assert fits(block)
     assert block.splitlines()[-1].strip().endswith("hardware settings.")

@@ -35,6 +35,8 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     measure = measure_points(patch)
     data = closing_points(patch)
     expected = patch.array("rates", "expected_leaked", ("role", "round"))
+    if expected is not None and not np.isfinite(expected).any():
+        expected = None
     if measure is None and data is None and expected is None:
         raise NothingToDraw("no leaked population is identifiable, and no model of one")
     figure = canvas(COLUMN, 3.4, TITLE, place)

@@ -163,7 +163,7 @@ def end_label(axes: Axes, x: float, y: float, text: str, color: str) -> None:
 
 def spread_apart(heights: Sequence[float], least: float) -> list[float]:
     """Return label heights moved as little as needed to stand at least `least` apart."""
-    order = np.argsort(heights)
+    order = np.argsort(heights, kind="stable")
     moved = np.array(heights, dtype=float)[order]
     for _ in range(50):
         gaps = np.diff(moved)
@@ -192,5 +192,7 @@ def write(figure: Figure, stem: Path) -> tuple[Path, Path]:
     svg, png = stem.with_suffix(".svg"), stem.with_suffix(".png")
     with mpl.rc_context({"svg.hashsalt": stem.name}):
         figure.savefig(svg, format="svg", metadata={"Date": None, "Creator": None})
+    # The arrangement found for the first file serves the second: finding it takes half the time.
+    figure.set_layout_engine("none")
     figure.savefig(png, format="png", dpi=PNG_DPI, metadata={"Software": None})
     return svg, png
