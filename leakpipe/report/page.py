@@ -13,6 +13,7 @@ from leakpipe.report import attention, tables
 from leakpipe.report.figure_file import FigureFile
 from leakpipe.report.inline import inline
 from leakpipe.report.inputs import PatchReport
+from leakpipe.report.readout_table import ReadoutTable, readout_table
 from leakpipe.report.run_log import changed_words, placed, verdict
 from leakpipe.report.web import CAUTION, rendered
 from leakpipe.report.wording import listed, percent
@@ -23,6 +24,7 @@ SECTIONS = (
     ("figures", "Figures"),
     ("qubits", "Qubits"),
     ("routes", "Routes of the share"),
+    ("readout", "Readout"),
     ("findings", "Findings"),
     ("unknown", "Not identifiable"),
     ("provenance", "Provenance"),
@@ -94,6 +96,7 @@ def page(
             "figure_groups": _figure_groups(figures, patches),
             "qubit_tables": tables.qubit_tables(summary, patches),
             "routes": tables.routes(summary),
+            "readout_tables": _readout_tables(patches),
             "findings": [
                 (
                     severity,
@@ -182,6 +185,13 @@ def _figure_groups(
             }
         )
     return list(groups.items())
+
+
+def _readout_tables(patches: Sequence[PatchReport]) -> list[ReadoutTable]:
+    """Return the readout diagnostics, once for each readout model."""
+    known = _places_with_known_model(patches)
+    made = [readout_table(patch) for patch in patches if patch.label not in known]
+    return [table for table in made if table is not None]
 
 
 def _places_with_known_model(patches: Sequence[PatchReport]) -> set[str]:

@@ -7,6 +7,7 @@ from collections.abc import Hashable, Sequence
 from typing import Any
 
 from leakpipe.findings import Finding, most_severe_first
+from leakpipe.report.assignment import assignment
 from leakpipe.report.contract import CONTRACT, validated
 from leakpipe.report.inputs import PatchReport
 
@@ -124,7 +125,7 @@ def _patch(patch: PatchReport) -> dict[str, Any]:
 
 
 def _qubit(patch: PatchReport, qubit: str, role: str) -> dict[str, Any]:
-    assignment = patch.estimate("model", "assignment", {"qubit": qubit})
+    right = assignment(patch, qubit)
     return {
         "qubit": qubit,
         "role": role,
@@ -132,5 +133,5 @@ def _qubit(patch: PatchReport, qubit: str, role: str) -> dict[str, Any]:
             name: patch.estimate("rates", f"qubit_{name}", {"qubit": qubit}).to_json()
             for name in PER_QUBIT
         },
-        "assignment": assignment.to_json() if assignment.identifiable else None,
+        "assignment": right.to_json() if right.identifiable else None,
     }

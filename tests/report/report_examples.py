@@ -43,16 +43,30 @@ def model(layout: Layout, rng: np.random.Generator) -> xr.Dataset:
     covariance = np.broadcast_to(np.eye(2), (len(qubits), 2, 2)) * rng.uniform(
         0.85, 1.2, (len(qubits), 1, 1)
     )
-    assignment = [
-        _around(value, 0.002, "invented") for value in rng.uniform(0.965, 0.99, len(qubits))
-    ]
+    right = rng.uniform(0.965, 0.99, len(qubits))
+    table = np.full((len(qubits), 3, 3), 0.01)
+    for state in range(3):
+        table[:, state, state] = right - 0.01 * state
     return xr.Dataset(
         {
-            "means": (("qubit", "state", "feature"), means),
-            "covariance": (("qubit", "feature", "feature_too"), covariance),
-            **store("assignment", ("qubit",), assignment),
+            "mean": (("qubit", "state", "feature"), means),
+            "covariance": (("qubit", "feature", "feature_2"), covariance),
+            "assignment": (("qubit", "state", "label"), table + 0.004 * np.eye(3)),
+            "assignment_as_prepared": (("qubit", "prepared", "label"), table),
+            "preparation_weight": (("qubit", "prepared", "state"), table + 0.005 * np.eye(3)),
+            "shots": (("qubit", "prepared"), np.full((len(qubits), 3), 10_000.0)),
+            "decay": (("qubit", "tail"), rng.uniform(0.005, 0.03, (len(qubits), 2))),
+            "error_ratio": ("qubit", rng.uniform(1.0, 1.6, len(qubits))),
+            "missing": ("qubit", np.zeros(len(qubits))),
+            "usable": ("qubit", np.ones(len(qubits), np.int8)),
         },
-        coords={"qubit": qubits, "state": [0, 1, 2]},
+        coords={
+            "qubit": qubits,
+            "state": [0, 1, 2],
+            "label": [0, 1, 2],
+            "tail": ["1 to 0", "2 to 1"],
+        },
+        attrs={"working_prior": "0.6 0.39 0.01"},
     )
 
 
@@ -82,6 +96,7 @@ def readout(
             "closing_leaked": (ends, closing),
             "closing_leaked_shot_error": (ends, np.full(closing.shape, 5e-4)),
             "closing_leaked_calibration_error": (ends, np.full(closing.shape, 1e-4)),
+            "phi": (("recording", "qubit"), rng.uniform(0, 2e-3, (len(rounds), len(qubits)))),
             "usable": ("qubit", np.full(len(qubits), int(usable), np.int8)),
             "usable_reason": ("qubit", ["" if usable else "no |2> was prepared"] * len(qubits)),
         },
@@ -99,7 +114,8 @@ def readout(
     )
     if usable:
         return data
-    return data.drop_vars([name for name in data.data_vars if "leaked" in str(name)])
+    # What an unusable population holds is no number anybody may show.
+    return data.assign({name: data[name] * 0 + 0.5 for name in data.data_vars if "leaked" in name})
 
 
 def _stored(dim: str, estimates: dict[str, list[Estimate]]) -> dict:

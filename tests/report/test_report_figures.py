@@ -100,7 +100,7 @@ def test_one_stage_missing(stage, own, patch):
         ("fidelity", "logical", ["logical_error_error", "amplitude"]),
         ("fidelity", "share", ["per_round_without", "fidelity_without"]),
         ("routes", "share", ["leakage_share_statistical"]),
-        ("readout-overview", "model", ["assignment"]),
+        ("readout-overview", "model", ["assignment_as_prepared", "error_ratio", "usable"]),
     ],
 )
 def test_optional_variables(figure, stage, names, patch, tmp_path):
@@ -208,6 +208,17 @@ def test_separations_of_the_example(patch):
     np.testing.assert_allclose(separations(patch)[:, 0], 4.8 / deviation, rtol=1e-12)
 
 
+def test_placed_class_is_not_drawn(patch, tmp_path):
+    """Where no |2> was prepared, the class the stage put far away takes no part in the picture."""
+    model = patch.stages["model"].copy(deep=True)
+    model["mean"][0, 2] = 60.0
+    model["usable"][0] = 0
+    placed = replace(patch, stages={**patch.stages, "model": model})
+    assert np.isnan(separations(placed)[0, 1:]).all()
+    assert np.isfinite(separations(placed)[1:]).all()
+    written("readout-clouds", placed, tmp_path)
+
+
 def small_readout(values, shots, shot_error, calibration_error):
     """Return a patch whose readout stage holds (recording, round, measure) values."""
     recordings, rounds, measure = values.shape
@@ -250,6 +261,12 @@ def test_a_round_without_one_qubit_is_no_other_mean():
     values[:, 1, 0] = np.nan
     rounds, *_ = measure_points(small_readout(values, [100, 100], 0.001, 0.0))
     assert rounds.tolist() == [1]
+
+
+def test_unusable_populations_are_not_shown():
+    """A population that the readout stage refused does not enter a mean, whatever it holds."""
+    assert measure_points(patch_report(usable=False)) is None
+    assert closing_points(patch_report(usable=False)) is None
 
 
 def test_closing_points_per_duration(patch):

@@ -14,6 +14,7 @@ from leakpipe.report.figures import (
     detection,
     evidence,
     fidelity,
+    overview,
     populations,
     routes,
 )
@@ -28,7 +29,7 @@ FIGURES: dict[str, tuple[str, Callable[[PatchReport, str], Drawing]]] = {
     "routes": (routes.TITLE, routes.draw),
     "correlation": (correlation.TITLE, correlation.draw),
     "evidence": (evidence.TITLE, evidence.draw),
-    "readout-overview": (clouds.OVERVIEW, clouds.overview),
+    "readout-overview": (overview.TITLE, overview.draw),
     "readout-clouds": (clouds.TITLE, clouds.draw),
 }
 """Figures in the order of the page: name to title and drawing function."""

@@ -7,7 +7,6 @@ from matplotlib.axes import Axes
 from matplotlib.patches import Circle
 
 from leakpipe.report.figures.style import (
-    COLUMN,
     FULL,
     Array,
     Drawing,
@@ -89,12 +88,22 @@ def separations(patch: PatchReport) -> Array | None:
 
 
 def _means(patch: PatchReport) -> tuple[Array, Array] | None:
+    """Return class means (qubit, state, feature) and covariances (qubit, feature, feature).
+
+    The mean of a state that was placed and not measured is NaN.
+    """
     data = patch.stage("model")
-    if data is None or "means" not in data or "covariance" not in data:
+    if data is None or "mean" not in data or "covariance" not in data:
         return None
-    means = np.asarray(data["means"].transpose("qubit", ...).values, dtype=np.float64)
+    means = patch.array("model", "mean", ("qubit", "state", "feature"))
     covariance = np.asarray(data["covariance"].transpose("qubit", ...).values, dtype=np.float64)
-    return (means, covariance) if means.ndim == 3 and covariance.ndim == 3 else None
+    if means is None or covariance.ndim != 3:
+        return None
+    means = means.copy()
+    for row, usable in enumerate(patch.labels("model", "usable")):
+        if not usable and means.shape[1] > 2:
+            means[row, 2] = np.nan
+    return means, covariance
 
 
 def draw(patch: PatchReport, place: str) -> Drawing:
@@ -123,7 +132,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
             panel.text(0.5, 0.5, "no model", ha="center", va="center", size=8)
             continue
         origin, turn, at = plane(mean[known], spread)
-        _panel(panel, at, _prior(patch, str(name), int(known.sum())))
+        _panel(panel, at, _prior(patch, int(known.sum())))
         _cloud(patch, panel, name, origin, turn)
     return Drawing(
         figure,
@@ -136,14 +145,17 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     )
 
 
-def _prior(patch: PatchReport, qubit: str, states: int) -> Array:
-    """Return the working prior of a qubit's labels, equal where the model names none."""
+def _prior(patch: PatchReport, states: int) -> Array:
+    """Return the working prior of the labels, equal where the model names none."""
     data = patch.stage("model")
-    if data is None or "working_prior" not in data:
+    words = "" if data is None else str(data.attrs.get("working_prior", ""))
+    try:
+        values = np.array([float(word) for word in words.split()])
+    except ValueError:
+        values = np.array([])
+    if len(values) < states or not (values[:states] > 0).all():
         return np.full(states, 1 / states)
-    prior = data["working_prior"]
-    values = (prior.sel(qubit=qubit) if "qubit" in prior.dims else prior).values
-    return np.asarray(values, dtype=np.float64)[:states]
+    return values[:states]
 
 
 def _panel(panel: Axes, at: Array, prior: Array) -> None:
@@ -191,74 +203,3 @@ def _cloud(patch: PatchReport, panel: Axes, qubit: object, origin: Array, turn: 
             *spots.T, ".", color=LIGHT[COLORS[prepared]], markersize=1.6, alpha=0.5,
             markeredgewidth=0, rasterized=True, zorder=1,
         )  # fmt: skip
-
-
-OVERVIEW = "Readout of all qubits"
-
-
-def overview(patch: PatchReport, place: str) -> Drawing:
-    """Draw the separations and the assignment error of every qubit side by side.
-
-    Raises
-    ------
-    NothingToDraw
-        There is no readout model.
-    """
-    apart = separations(patch)
-    qubits = [str(name) for name in patch.labels("model", "qubit")]
-    if apart is None:
-        raise NothingToDraw("no readout model (the recordings hold states, not points)")
-    estimates = [patch.estimate("model", "assignment", {"qubit": name}) for name in qubits]
-    known = [e.value is not None for e in estimates]
-    wide = len(qubits) > 20
-    figure = canvas(FULL if wide else COLUMN, 3.9, OVERVIEW, place)
-    upper, lower = figure.subplots(2, 1, sharex=True)
-    x = np.arange(len(qubits), dtype=float)
-    pairs = ("0 and 1", "1 and 2", "0 and 2")
-    for column, (words, marker, color) in enumerate(zip(pairs, MARKERS, COLORS, strict=True)):
-        upper.plot(x, apart[:, column], marker, color=LIGHT[color], label=words, markersize=4)
-    upper.set_ylabel("distance of means\n(std. deviations)")
-    upper.set_ylim(0, 1.12 * max(float(np.nanmax(apart, initial=1.0)), 1.0))
-    upper.legend(ncols=3, loc="lower left", bbox_to_anchor=(0, 1), borderaxespad=0.1, fontsize=8.5)
-    usable = patch.labels("readout", "usable")
-    names = patch.labels("readout", "qubit")
-    refused = [n for n, good in zip(names, usable, strict=False) if not good]
-    if any(known):
-        wrong = np.array(
-            [100 * (1 - e.value) if e.value is not None else np.nan for e in estimates]
-        )
-        ends = np.array(
-            [
-                [
-                    100 * ((e.high or e.value or 0) - (e.value or 0)),
-                    100 * ((e.value or 0) - (e.low or e.value or 0)),
-                ]
-                for e in estimates
-            ]
-        ).T
-        lower.errorbar(
-            x, wrong, yerr=np.maximum(ends, 0), fmt="o", color=LIGHT["ink"], elinewidth=1
-        )
-        lower.set_ylim(bottom=0)
-    else:
-        lower.text(0.5, 0.5, "assignment not reported", transform=lower.transAxes, ha="center")
-    lower.set_ylabel("wrong readings of\n0 and 1 (%)")
-    lower.set_xticks(
-        x, [short_name(n, 10) for n in qubits], rotation=90, fontsize=7.5 if wide else 8.5
-    )
-    lower.margins(x=0.02)
-    for place_of, name in zip(x, qubits, strict=True):
-        if name in refused:
-            for axes in (upper, lower):
-                axes.axvspan(
-                    place_of - 0.5, place_of + 0.5, color=LIGHT["hair"], alpha=0.8, linewidth=0
-                )
-    worst = qubits[int(np.nanargmin(apart[:, 0]))] if np.isfinite(apart[:, 0]).any() else "none"
-    return Drawing(
-        figure,
-        OVERVIEW,
-        "Above: distances between class means in units of the clouds' spread; clouds closer than "
-        "about 4 overlap. Below: readings of 0 and 1 that are wrong, with 95 % intervals. Shaded: "
-        f"leaked population not identifiable ({len(refused)} of {len(qubits)}).",
-        f"Separations and wrong readings of {len(qubits)} qubits; 0 and 1 are closest on {worst}.",
-    )

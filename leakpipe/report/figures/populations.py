@@ -160,12 +160,20 @@ def _parts(
     value, shot, calibration = found
     if value is None or not len(patch.labels("readout", "recording")):
         return None
+    value = np.where(_usable(patch, dims[-1]), value, np.nan)
     keep = _plain_rows(patch)
     shots = np.asarray(patch.labels("readout", "shots") or np.ones(len(keep)), dtype=float)
     nothing = np.zeros_like(value)
     shot = nothing if shot is None else np.nan_to_num(shot)
     calibration = nothing if calibration is None else np.nan_to_num(calibration)
     return value[keep], shot[keep], calibration[keep], shots[keep]
+
+
+def _usable(patch: PatchReport, kind: str) -> NDArray[np.bool_]:
+    """Return which qubits of a dimension have an identifiable leaked population."""
+    names, flags = patch.labels("readout", "qubit"), patch.labels("readout", "usable")
+    refused = {name for name, good in zip(names, flags, strict=False) if not good}
+    return np.array([name not in refused for name in patch.labels("readout", kind)], dtype=bool)
 
 
 def _pooled(
