@@ -4,17 +4,19 @@ from __future__ import annotations
 
 import hashlib
 import json
+from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Annotated, Literal
 
-from pydantic import Field, ValidationError, model_validator
+from pydantic import Field, model_validator
 
 from leakpipe.codes.layout import Basis, Layout
 from leakpipe.codes.repetition import repetition
 from leakpipe.codes.rotated import rotated_surface
 from leakpipe.config.base import Section
-from leakpipe.errors import ConfigError, numbered
+from leakpipe.config.loading import read_mapping, validated
+from leakpipe.errors import ConfigError
 
 Probability = Annotated[float, Field(ge=0, le=1)]
 Positive = Annotated[int, Field(ge=1)]
@@ -49,8 +51,6 @@ class CodeScenario(Section):
         for given, needed in ((self.data, own.data), (self.measure, own.measure)):
             if given is not None and len(given) != len(needed):
                 raise ConfigError(f"code needs {len(needed)} names, got {len(given)}")
-        from dataclasses import replace
-
         return replace(own, data=self.data or own.data, measure=self.measure or own.measure)
 
 
@@ -234,44 +234,13 @@ class Scenario(Section):
         return hashlib.sha256(text.encode()).hexdigest()
 
 
-def scenario_from(data: Any, source: str) -> Scenario:
-    """Validate a scenario given as plain values.
-
-    Raises
-    ------
-    ConfigError
-        Every problem is listed, with its place.
-    """
-    if not isinstance(data, dict):
-        raise ConfigError(f"{source}: must be a mapping of settings, got {type(data).__name__}")
-    try:
-        return Scenario.model_validate_json(json.dumps(data))
-    except ValidationError as error:
-        problems = [
-            f"{source}  {'.'.join(map(str, one['loc'])) or 'scenario'}  {one['msg']}"
-            for one in error.errors()
-        ]
-        raise ConfigError(numbered(problems, "nothing was simulated")) from error
-    except TypeError as error:
-        raise ConfigError(f"{source}: {error}") from error
-
-
 def load_scenario(path: Path) -> Scenario:
     """Read a scenario file.
 
     Raises
     ------
     ConfigError
-        The file is missing, not YAML or not a scenario.
+        The file cannot be read or is not a scenario; every problem with its line.
     """
-    import yaml
-
-    try:
-        text = path.read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        raise ConfigError(f"{path}: cannot be read: {error}") from error
-    try:
-        data = yaml.safe_load(text)
-    except yaml.YAMLError as error:
-        raise ConfigError(f"{path}: not YAML: {error}") from error
-    return scenario_from(data, path.name)
+    node, value = read_mapping(path)
+    return validated(Scenario, value, node, str(path))
