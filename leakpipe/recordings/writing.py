@@ -209,6 +209,8 @@ def _signal_variable(dataset: Any, name: str, dims: tuple[str, ...], span: float
         dataset.createVariable(name, "u1", dims, fill_value=MISSING)
     elif name.endswith("iq"):
         variable = dataset.createVariable(name, "i2", dims, fill_value=PACKED_FILL)
+        # The dataset's own switch only reaches variables that exist already.
+        variable.set_auto_maskandscale(False)
         variable.scale_factor = span / PACKED_RANGE
     else:
         dataset.createVariable(name, "i2", dims, fill_value=False)
