@@ -28,13 +28,16 @@ DEFINITIONS = {
     "steady_leakage": "G / (G + S); of a role: mean of its qubits",
     "settling_rounds": "-1 / ln(1 - G - S); of the code: the time at which the leaked data and "
     "measure population together has covered 1 - 1/e of its way to the steady level",
-    "detection_rise": "(d[settled] - d[start]) / d[start] of the mean over checks; start: the law "
-    "of the settling continued to round 0, settled: continued to infinity",
+    "detection_rise": "steady level over start minus one of the mean over checks; start: the "
+    "settling law at layer 2, the first interior one",
     "logical_error_per_round": "1 - 2 P(R) = A (1 - 2 eps)^R over the recordings' R, R = 1 left "
     "out; hard labels of the device, matching decoder",
     "leakage_share": "(eps with - eps without) / eps with, same decoder, injection set to zero",
     "kappa": "2 v, v the probability that a leaked qubit flips the outcome of its check",
 }
+
+FIRST_INTERIOR = 2
+"""First layer in which every check compares two rounds."""
 
 
 @dataclass(frozen=True)
@@ -79,8 +82,8 @@ def code_settling(rates: LeakageRates) -> float:
 def detection_rise(outcome: Outcome, layout: Layout, basis: Basis, settling: float) -> Known:
     """Return the relative rise of the mean detection probability over interior layers 2..R.
 
-    A linear fit of d[r] = A - B lam^r with the known settling time. The error takes the layers'
-    means as independent binomials, checks and layers alike.
+    A linear fit of d[r] = A - B lam^(r - 2) with the known settling time: the rise is B / (A - B).
+    The error takes the layers' means as independent binomials, checks and layers alike.
     """
     rounds = outcome.rounds
     if rounds < 4 or not np.isfinite(settling) or settling <= 0:
@@ -91,8 +94,8 @@ def detection_rise(outcome: Outcome, layout: Layout, basis: Basis, settling: flo
     assert inside.all()
     spread = np.sqrt((probability * (1 - probability)).sum(axis=1) / outcome.shots)
     spread /= probability.shape[1]
-    turns = np.arange(2, rounds + 1)
-    design = np.stack([np.ones(rounds - 1), -np.exp(-turns / settling)], axis=1)
+    turns = np.arange(FIRST_INTERIOR, rounds + 1)
+    design = np.stack([np.ones(rounds - 1), -np.exp((FIRST_INTERIOR - turns) / settling)], axis=1)
     scaled = design / spread[:, None]
     covariance = np.linalg.inv(scaled.T @ scaled)
     level, size = covariance @ scaled.T @ (mean / spread)
