@@ -6,9 +6,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from leakpipe.report.assignment import assignment
 from leakpipe.report.inputs import PatchReport
-from leakpipe.report.wording import percent
 
 
 @dataclass
@@ -38,12 +36,7 @@ def readout_table(patch: PatchReport) -> ReadoutTable | None:
     if not wanted:
         return None
     table = ReadoutTable(patch.label, rows={name: [] for name in wanted})
-    table.heads.append("right readings, as prepared")
-    for name in wanted:
-        estimate = assignment(patch, name)
-        sort = "" if estimate.value is None else repr(float(estimate.value))
-        table.rows[name].append((percent(estimate), sort))
-    _matrix(table, patch, names, "assignment", "wrong of a true {} (%)", ("state", "label"))
+    _matrix(table, patch, names, "assignment", "misread true {} (%)", ("state", "label"))
     weights = ("prepared", "state")
     _matrix(table, patch, names, "preparation_weight", "failed preparation of {} (%)", weights)
     _columns(table, patch, names, "separation", "pair_of_states", "distance {} (sigma)", "{:.1f}")
@@ -58,7 +51,7 @@ def readout_table(patch: PatchReport) -> ReadoutTable | None:
         if values is not None:
             table.add(head, dict(zip(names, values.tolist(), strict=True)), form, scale)
     _drift(table, patch)
-    return table
+    return table if table.heads else None
 
 
 def _matrix(

@@ -340,3 +340,26 @@ def layouts() -> dict[str, Layout]:
         "repetition 5": repetition(5),
         "surface 5": rotated_surface(5),
     }
+
+
+def season(epochs: int = 12, qubits: Sequence[str] = ("D3",)) -> list[dict]:
+    """Return invented history rows: one code quantity and one per qubit, one epoch unknown."""
+    rows = []
+    for number in range(epochs):
+        levels = [(name, "steady_leakage", 0.01 + 0.001 * i) for i, name in enumerate(qubits)]
+        for name, quantity, value in [(None, "leakage_share", 0.12), *levels]:
+            known = number != 3
+            rows.append(
+                {
+                    "epoch": f"cal-{number:04d}",
+                    "acquired_at": f"2026-11-{number + 1:02d}T02:00:00+00:00",
+                    "patch": "west",
+                    "qubit": name,
+                    "quantity": quantity,
+                    "value": value if known else None,
+                    "low": value * 0.9 if known else None,
+                    "high": value * 1.1 if known else None,
+                    "flags": ["jump"] if number == 8 and name else [],
+                }
+            )
+    return rows

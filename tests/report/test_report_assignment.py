@@ -63,4 +63,4 @@ def test_diagnostics_without_optional_parts():
     patch.stages["model"] = slim
     table = readout_table(patch)
     assert not any("decay" in head for head in table.heads)
-    assert any("wrong of a true" in head for head in table.heads)
+    assert any("misread true" in head for head in table.heads)

@@ -8,7 +8,7 @@ from html.parser import HTMLParser
 from itertools import pairwise
 
 import pytest
-from report_examples import layouts, patch_report, renamed
+from report_examples import layouts, patch_report, renamed, season
 
 from leakpipe.codes.rotated import rotated_surface
 from leakpipe.findings import Finding
@@ -64,31 +64,6 @@ def read(html):
     reader.close()
     assert not reader.open
     return reader
-
-
-def season(epochs=12, qubit="D3"):
-    """Return invented history rows: one code quantity and one of a qubit, an unknown epoch."""
-    rows = []
-    for number in range(epochs):
-        for name, quantity, value in (
-            (None, "leakage_share", 0.12),
-            (qubit, "steady_leakage", 0.01),
-        ):
-            known = number != 3
-            rows.append(
-                {
-                    "epoch": f"cal-{number:04d}",
-                    "acquired_at": f"2026-11-{number + 1:02d}T02:00:00+00:00",
-                    "patch": "west",
-                    "qubit": name,
-                    "quantity": quantity,
-                    "value": value if known else None,
-                    "low": value * 0.9 if known else None,
-                    "high": value * 1.1 if known else None,
-                    "flags": ["jump"] if number == 8 and name else [],
-                }
-            )
-    return rows
 
 
 @pytest.fixture(scope="module")

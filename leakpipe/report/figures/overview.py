@@ -49,7 +49,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     if ratio is not None:
         panels[2].plot(x, ratio, "o", color=LIGHT["ink"])
         panels[2].axhline(1, color=LIGHT["quiet"], linewidth=0.8)
-        panels[2].set_ylim(bottom=0)
+        panels[2].set_ylim(0, 1.15 * max(float(np.nanmax(ratio, initial=1.0)), 1.0))
         panels[2].set_ylabel("leakage error\nagainst ideal")
     size = 7.5 if wide else 8.5
     panels[-1].set_xticks(x, [short_name(n, 10) for n in qubits], rotation=90, fontsize=size)
