@@ -45,9 +45,10 @@ def without(patch, stage, *names):
 
 
 @pytest.mark.parametrize("name", list(layouts()))
-def test_every_figure_is_written(name, tmp_path):
+def test_every_figure_is_written(name, tmp_path, drawn):
     """Small, line-shaped and 49-qubit patches get all figures, as SVG and PNG, with their words."""
-    made = write_figures(patch_report(layout=layouts()[name]), tmp_path)
+    patch = patch_report(layout=layouts()[name])
+    made = drawn if name == "surface 3" else write_figures(patch, tmp_path)
     assert [figure.name for figure in made] == list(FIGURES)
     for figure in made:
         assert not figure.missing

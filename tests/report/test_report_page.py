@@ -67,14 +67,14 @@ def read(html):
 
 
 @pytest.fixture(scope="module")
-def pages(tmp_path_factory):
+def pages(tmp_path_factory, patch, drawn):
     """Every kind of page: full, two bases, bare, nasty names, history, empty history."""
     folder = tmp_path_factory.mktemp("figures")
 
     def of(*patches, figures, changes=None):
         return page(summary(list(patches), changes or ()), patches, figures, changes)
 
-    full = patch_report()
+    full = patch
     nasty = replace(
         patch_report(layout=renamed(rotated_surface(3), "D3", NASTY)),
         device=NASTY, patch=NASTY, calibration_id=NASTY, config_text=NASTY,
@@ -82,7 +82,6 @@ def pages(tmp_path_factory):
     )  # fmt: skip
     bare = patch_report(stages=())
     other = replace(patch_report(seed=11), basis="X")
-    drawn = write_figures(full, folder / "full")
     again = [replace(figure, place=other.label) for figure in drawn]
     large = patch_report(layout=layouts()["surface 5"])
     change = Finding("change", "watch", "D3", "D3 rose.")
