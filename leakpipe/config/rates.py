@@ -2,8 +2,20 @@
 
 from __future__ import annotations
 
+from typing import Annotated, Literal
+
+from pydantic import Field
+
 from leakpipe.config.base import Section
 
 
 class RatesSettings(Section):
     """How injection and seepage are fitted."""
+
+    boundary_rounds: Annotated[int, Field(ge=1)] = 1
+    """Rounds at the start whose detection layers are never fitted (layer 1 at least)."""
+    observation: Literal["outcome random", "detector random"] = "outcome random"
+    """What a leaked neighbour randomises: a check's outcome (circuits with reset), or its
+    detection events."""
+    draws: Annotated[int, Field(ge=100)] = 400
+    """Random draws of the fitted rates that later stages carry as their errors."""

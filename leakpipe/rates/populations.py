@@ -1,0 +1,272 @@
+"""Steady level and memory of every qubit of a role from its leaked populations.
+
+A qubit's leaked population after r rounds is p_k (1 - lam_k^r) + p0_k lam_k^r. The lam_k of a
+role's qubits are drawn together: lam_k ~ N(mu, s^2), with mu and s estimated from all of them and, for
+mu, from other data such as correlations (empirical Bayes; the spread by expectation maximisation,
+DerSimonian and Laird, Control. Clin. Trials 7, 177 (1986), for the moment form). A qubit whose own
+data say little then leans on the others; how much is part of its interval.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import least_squares
+
+FloatArray = NDArray[np.float64]
+
+SPREAD_START = 0.1
+SPREAD_LEAST = 0.02
+"""Least spread of lam between qubits: the same lam for all is never assumed exactly."""
+SPREAD_STEPS = 25
+LARGEST_MEMORY = 0.995
+"""lam beyond which the data of tens of rounds cannot tell it from 1."""
+
+
+@dataclass(frozen=True)
+class Series:
+    """Leaked populations of one role, one entry per observation.
+
+    Attributes
+    ----------
+    qubit
+        (n,) index of the qubit.
+    rounds
+        (n,) rounds gone by.
+    value, variance
+        (n,) leaked population and its shot variance.
+    cluster_scores
+        (cluster, n) what each cluster of shots contributed to `value` beyond its expectation.
+    replicas
+        (replica, n) the same values under bootstrapped calibrations.
+    """
+
+    qubit: NDArray[np.int64]
+    rounds: FloatArray
+    value: FloatArray
+    variance: FloatArray
+    cluster_scores: FloatArray
+    replicas: FloatArray
+
+
+@dataclass(frozen=True)
+class RoleFit:
+    """Fitted populations of one role.
+
+    Attributes
+    ----------
+    level, memory
+        (qubit,) p_k and lam_k.
+    start
+        Common p0 / p_ss at round 0.
+    mean_memory, spread
+        mu and s.
+    covariance
+        Of (p_1.., lam_1.., mu, start), shots, calibration and spread included.
+    own_weight
+        (qubit,) part of lam_k's information that comes from the qubit's own data.
+    chi_square, freedom
+        Goodness of fit.
+    at_bound
+        (qubit,) True where lam_k ended on the edge of its range.
+    """
+
+    level: FloatArray
+    memory: FloatArray
+    start: float
+    mean_memory: float
+    spread: float
+    covariance: FloatArray
+    own_weight: FloatArray
+    chi_square: float
+    freedom: int
+    at_bound: NDArray[np.bool_]
+
+    def draws(self, count: int, rng: np.random.Generator) -> tuple[FloatArray, FloatArray]:
+        """Return random levels and memories, each (draw, qubit), memories kept in [0, 1)."""
+        n = len(self.level)
+        mean = np.concatenate([self.level, self.memory])
+        block = self.covariance[: 2 * n, : 2 * n]
+        sample = rng.multivariate_normal(mean, block, size=count, method="eigh")
+        return sample[:, :n], np.clip(sample[:, n:], 0.0, LARGEST_MEMORY)
+
+
+def fit_role(
+    series: Series,
+    qubits: int,
+    *,
+    memory_prior: tuple[float, float] | None = None,
+    free_start: bool,
+) -> RoleFit:
+    """Fit levels and memories of a role's qubits.
+
+    Parameters
+    ----------
+    series
+        Observations.
+    qubits
+        Number of qubits.
+    memory_prior
+        Value and variance of mu from other data.
+    free_start
+        Whether the population at round 0 is fitted (as a common fraction of the steady level).
+    """
+    spread = SPREAD_START
+    theta = _start(series, qubits)
+    for _ in range(SPREAD_STEPS):
+        theta, normal = _solve(series, qubits, theta, spread, memory_prior, free_start)
+        inverse = _inverse(normal, free_start)
+        lam, mu = theta[qubits : 2 * qubits], theta[2 * qubits]
+        index = np.arange(qubits, 2 * qubits)
+        gap = inverse[index, index] + inverse[-2, -2] - 2 * inverse[index, -2]
+        new = float(np.sqrt(np.mean((lam - mu) ** 2 + np.maximum(gap, 0.0))))
+        new = max(new, SPREAD_LEAST)
+        if abs(new - spread) < 1e-4:
+            break
+        spread = new
+    return _finish(series, qubits, theta, spread, memory_prior, free_start)
+
+
+def _start(series: Series, qubits: int) -> FloatArray:
+    level = np.zeros(qubits)
+    late = series.rounds >= np.median(series.rounds)
+    for k in range(qubits):
+        mine = (series.qubit == k) & late
+        mine = mine if mine.any() else series.qubit == k
+        weight = 1 / series.variance[mine]
+        level[k] = np.sum(weight * series.value[mine]) / weight.sum()
+    return np.concatenate([level, np.full(qubits, 0.7), [0.7, 0.0]])
+
+
+def _model(series: Series, qubits: int, theta: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return predicted populations and their slopes, (n,) and (n, parameter)."""
+    p, lam = theta[:qubits][series.qubit], theta[qubits : 2 * qubits][series.qubit]
+    start = theta[-1]
+    power = lam**series.rounds
+    value = p * (1 - (1 - start) * power)
+    slopes = np.zeros((len(value), 2 * qubits + 2))
+    rows = np.arange(len(value))
+    slopes[rows, series.qubit] = 1 - (1 - start) * power
+    by_power = -p * (1 - start)
+    slopes[rows, qubits + series.qubit] = by_power * series.rounds * lam ** (series.rounds - 1)
+    slopes[:, -1] = p * power
+    return value, slopes
+
+
+def _prior_rows(
+    qubits: int, theta: FloatArray, spread: float, memory_prior: tuple[float, float] | None
+) -> tuple[FloatArray, FloatArray]:
+    """Return residuals and slopes of lam_k ~ N(mu, s^2) and of what is known of mu."""
+    size = 2 * qubits + 2
+    rows = qubits + (memory_prior is not None)
+    residual, slopes = np.zeros(rows), np.zeros((rows, size))
+    residual[:qubits] = (theta[qubits : 2 * qubits] - theta[2 * qubits]) / spread
+    slopes[np.arange(qubits), qubits + np.arange(qubits)] = 1 / spread
+    slopes[:qubits, 2 * qubits] = -1 / spread
+    if memory_prior is not None:
+        value, variance = memory_prior
+        residual[-1] = (theta[2 * qubits] - value) / np.sqrt(variance)
+        slopes[-1, 2 * qubits] = 1 / np.sqrt(variance)
+    return residual, slopes
+
+
+def _solve(
+    series: Series,
+    qubits: int,
+    theta: FloatArray,
+    spread: float,
+    memory_prior: tuple[float, float] | None,
+    free_start: bool,
+) -> tuple[FloatArray, FloatArray]:
+    sigma = np.sqrt(series.variance)
+    free = np.ones(len(theta), dtype=bool)
+    free[-1] = free_start
+
+    def full(x: FloatArray) -> FloatArray:
+        out = theta.copy()
+        out[free] = x
+        return out
+
+    def residual(x: FloatArray) -> FloatArray:
+        value, _ = _model(series, qubits, full(x))
+        prior, _ = _prior_rows(qubits, full(x), spread, memory_prior)
+        return np.concatenate([(value - series.value) / sigma, prior])
+
+    def slopes(x: FloatArray) -> FloatArray:
+        _, jacobian = _model(series, qubits, full(x))
+        _, prior = _prior_rows(qubits, full(x), spread, memory_prior)
+        return np.vstack([jacobian / sigma[:, None], prior])[:, free]
+
+    low = np.concatenate([np.full(qubits, -1.0), np.zeros(qubits), [0.0, 0.0]])
+    high = np.concatenate(
+        [np.full(qubits, 1.0), np.full(qubits, LARGEST_MEMORY), [LARGEST_MEMORY, 3.0]]
+    )
+    begin = np.clip(theta, low + 1e-6, high - 1e-6)
+    found = least_squares(
+        residual, begin[free], slopes, bounds=(low[free], high[free]), x_scale="jac"
+    )
+    theta = full(found.x)
+    return theta, _normal(series, qubits, theta, spread, memory_prior)
+
+
+def _normal(
+    series: Series,
+    qubits: int,
+    theta: FloatArray,
+    spread: float,
+    memory_prior: tuple[float, float] | None,
+) -> FloatArray:
+    _, jacobian = _model(series, qubits, theta)
+    _, prior = _prior_rows(qubits, theta, spread, memory_prior)
+    normal = (jacobian / series.variance[:, None]).T @ jacobian + prior.T @ prior
+    return np.asarray(normal)
+
+
+def _inverse(normal: FloatArray, free_start: bool) -> FloatArray:
+    """Invert over the free parameters; a fixed start has no variance."""
+    size = len(normal) if free_start else len(normal) - 1
+    out = np.zeros_like(normal)
+    out[:size, :size] = np.linalg.pinv(normal[:size, :size], hermitian=True)
+    return out
+
+
+def _finish(
+    series: Series,
+    qubits: int,
+    theta: FloatArray,
+    spread: float,
+    memory_prior: tuple[float, float] | None,
+    free_start: bool,
+) -> RoleFit:
+    normal = _normal(series, qubits, theta, spread, memory_prior)
+    inverse = _inverse(normal, free_start)
+    value, jacobian = _model(series, qubits, theta)
+    if not free_start:
+        jacobian = jacobian.copy()
+        jacobian[:, -1] = 0.0
+    _, prior = _prior_rows(qubits, theta, spread, memory_prior)
+    weighted = jacobian / series.variance[:, None]
+    # Shots: sandwich over clusters. Prior rows keep their own (model) covariance.
+    scores = series.cluster_scores @ weighted
+    clusters = len(scores)
+    meat = scores.T @ scores * clusters / max(clusters - 1, 1) + prior.T @ prior
+    covariance = inverse @ meat @ inverse
+    # Calibration: one linear step per bootstrapped calibration, common to all observations.
+    moved = (series.replicas - series.value) @ weighted @ inverse
+    covariance = covariance + np.cov(moved, rowvar=False)
+    own = (jacobian**2 / series.variance[:, None]).sum(axis=0)[qubits : 2 * qubits]
+    lam = theta[qubits : 2 * qubits]
+    return RoleFit(
+        level=theta[:qubits],
+        memory=lam,
+        start=float(theta[-1]),
+        mean_memory=float(theta[2 * qubits]),
+        spread=spread,
+        covariance=covariance,
+        own_weight=own / (own + 1 / spread**2),
+        chi_square=float(np.sum((value - series.value) ** 2 / series.variance)),
+        freedom=max(len(series.value) - 2 * qubits, 1),
+        at_bound=(lam < 1e-4) | (lam > LARGEST_MEMORY - 1e-4),
+    )

@@ -1,0 +1,93 @@
+"""From the cost of a leaked reading to the hazard that leakage adds over a memory.
+
+A leak episode of data qubit k starts at rate q_k per round, ends with probability g per round, and
+costs kappa(L) after L rounds (the closing readout sees the age of those still open). The hazard
+that leakage adds to ln(1 - 2P) after R rounds is Lambda(R). Assumes rare independent episodes with
+geometric lifetimes that stay on their qubit; an episode that ended by seepage costs what one costs
+that is open at the end. (Derived for leakpipe; tested against counterfactual simulation in
+studies/share.py.)
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Episodes:
+    """Leak episodes of the data qubits.
+
+    Attributes
+    ----------
+    injection, seepage
+        (data,) G and S per round.
+    measure_leaked
+        Mean number of leaked measure qubits per round.
+    """
+
+    injection: FloatArray
+    seepage: FloatArray
+    measure_leaked: float
+
+    @property
+    def ending(self) -> float:
+        """Probability per round that an episode ends, g = (G + S)(1 - p_ss), mean over episodes."""
+        total = self.injection + self.seepage
+        steady = self.injection / total
+        each = total * (1 - steady)
+        weight = np.maximum(steady, 1e-300)
+        return float(np.clip((each * weight).sum() / weight.sum(), 1e-3, 1 - 1e-6))
+
+    @property
+    def starts(self) -> float:
+        """Episodes that start per round over all data qubits, Q.
+
+        q_k = p_ss (G + S) / (1 - g) counts those that outlive their first round; times (1 - p_ss)
+        for the rounds in which the qubit is not leaked already.
+        """
+        total = self.injection + self.seepage
+        steady = self.injection / total
+        begin = steady * total / (1 - self.ending)
+        return float(np.sum(begin * (1 - steady)))
+
+
+def cost(age: FloatArray, full: float, memory: float) -> FloatArray:
+    """Return kappa(L) = kappa_inf (1 - rho^L)."""
+    return np.asarray(full * (1 - memory**age))
+
+
+def closing_cost(rounds: int, ending: float, full: float, memory: float) -> float:
+    """Return the mean cost of an episode that is open at the end of R rounds, kappa_F(R)."""
+    age = np.arange(1, rounds + 1, dtype=float)
+    weight = (1 - ending) ** age
+    return float(np.sum(weight * cost(age, full, memory)) / weight.sum())
+
+
+def hazard(
+    rounds: int, episodes: Episodes, measure_cost: float, full: float, memory: float
+) -> float:
+    """Return Lambda(R), what leakage adds to -ln(1 - 2P).
+
+    Parameters
+    ----------
+    rounds
+        R.
+    episodes
+        Rates of the data qubits and population of the measure qubits.
+    measure_cost
+        kappa_A, cost of one leaked measure-qubit round.
+    full, memory
+        kappa_inf and rho of the cost of a data episode.
+    """
+    g = episodes.ending
+    age = np.arange(1, rounds + 1, dtype=float)
+    kappa = cost(age, full, memory)
+    still_open = (1 - g) ** age * kappa
+    ended = np.cumsum(g * (1 - g) ** (age - 1) * kappa)
+    data = 2 * episodes.starts * float(np.sum(still_open + ended))
+    return 2 * measure_cost * episodes.measure_leaked * rounds + data
