@@ -7,7 +7,7 @@ decoded alike, that has no way to leak.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +20,12 @@ from leakpipe.rehearsal.noise import MemoryNoise
 
 CHUNK = 1 << 14
 """Shots simulated and decoded at a time, to bound memory."""
+
+SCORING_STEPS = 12
+"""Fisher scoring converges quadratically; four steps reach double precision from a log fit."""
+
+LEAST_FIDELITY = 0.02
+"""Smallest 1 - 2 P of the starting fit, where noise can make it negative."""
 
 Decode = Callable[[NDArray[np.uint8]], NDArray[np.uint8]]
 """Events (shot, layer, check) to the predicted flip of the logical value, (shot,)."""
@@ -144,15 +150,13 @@ def run_many(
 def fit_per_round(outcomes: Sequence[Outcome]) -> PerRound:
     """Fit the logical error per round; R = 1 is left out where others remain.
 
-    Weighted least squares on P(R) with binomial errors of the fitted curve, iterated.
+    Maximum likelihood of the binomial counts by Fisher scoring.
 
     Raises
     ------
     ValueError
         Fewer than two numbers of rounds remain.
     """
-    from scipy.optimize import curve_fit
-
     used = [one for one in outcomes if one.rounds > 1] or list(outcomes)
     rounds = np.array([one.rounds for one in used], dtype=float)
     shots = np.array([one.shots for one in used], dtype=float)
@@ -160,21 +164,21 @@ def fit_per_round(outcomes: Sequence[Outcome]) -> PerRound:
     if len(set(rounds)) < 2:
         raise ValueError("a logical error per round needs two numbers of rounds")
 
-    def curve(turns: NDArray[np.float64], log_keep: float, log_start: float) -> NDArray[np.float64]:
-        return np.asarray((1 - np.exp(log_start + log_keep * turns)) / 2)
-
-    guess = (float(np.log(np.clip(1 - 2 * seen[-1], 0.02, 0.999)) / rounds[-1]), 0.0)
-    model = (seen * shots + 1) / (shots + 2)
-    for _ in range(3):  # the weights settle at once, as they hardly depend on the fit
-        spread = np.sqrt(model * (1 - model) / shots)
-        guess, covariance = curve_fit(curve, rounds, seen, guess, spread, absolute_sigma=True)
-        model = np.clip(curve(rounds, *guess), 1e-9, 1 - 1e-9)
-    keep = float(np.exp(guess[0]))
+    logs = np.log(np.clip(1 - 2 * seen, LEAST_FIDELITY, None))
+    solution = np.polynomial.polynomial.polyfit(rounds, logs, 1)
+    for _ in range(SCORING_STEPS):
+        fidelity = np.exp(solution[0] + solution[1] * rounds)
+        model = np.clip((1 - fidelity) / 2, 1 / (2 * shots), 0.5)
+        weight = shots / (model * (1 - model))
+        slope = -fidelity[:, None] / 2 * np.stack([np.ones_like(rounds), rounds], axis=1)
+        covariance = np.linalg.inv((slope * weight[:, None]).T @ slope)
+        solution = solution + covariance @ (slope.T @ (weight * (seen - (1 - fidelity) / 2)))
+    keep = float(np.exp(solution[1]))
     return PerRound(
         value=(1 - keep) / 2,
-        error=keep / 2 * float(np.sqrt(covariance[0, 0])),
-        amplitude=float(np.exp(guess[1])),
-        chi_square=float((((seen - model) / spread) ** 2).sum()),
+        error=keep / 2 * float(np.sqrt(covariance[1, 1])),
+        amplitude=float(np.exp(solution[0])),
+        chi_square=float((weight * (seen - model) ** 2).sum()),
         freedom=len(rounds) - 2,
     )
 
@@ -219,8 +223,6 @@ def share_truth(
     decoder_for
         The decoder of both.
     """
-    from dataclasses import replace
-
     quiet = replace(setting, noise=setting.noise.without_injection())
     decoders = {turns: decoder_for(turns) for turns in rounds}
     outcomes, without = (

@@ -29,7 +29,7 @@ DEFINITIONS = {
     "settling_rounds": "-1 / ln(1 - G - S); of the code: the time at which the leaked data and "
     "measure population together has covered 1 - 1/e of its way to the steady level",
     "detection_rise": "steady level over start minus one of the mean over checks; start: the "
-    "settling law at layer 2, the first interior one",
+    "settling law continued to round 0; from_layer_2: start at the first interior layer",
     "logical_error_per_round": "1 - 2 P(R) = A (1 - 2 eps)^R over the recordings' R, R = 1 left "
     "out; hard labels of the device, matching decoder",
     "leakage_share": "(eps with - eps without) / eps with, same decoder, injection set to zero",
@@ -79,23 +79,26 @@ def code_settling(rates: LeakageRates) -> float:
     return float(brentq(left, 0.0, 50 * max(longest, 1e-3)))
 
 
-def detection_rise(outcome: Outcome, layout: Layout, basis: Basis, settling: float) -> Known:
+def detection_rise(
+    outcome: Outcome, layout: Layout, basis: Basis, settling: float, start_layer: int = 0
+) -> Known:
     """Return the relative rise of the mean detection probability over interior layers 2..R.
 
-    A linear fit of d[r] = A - B lam^(r - 2) with the known settling time: the rise is B / (A - B).
+    A linear fit of d[r] = A - B lam^(r - start) with the known settling time: B / (A - B).
     The error takes the layers' means as independent binomials, checks and layers alike.
     """
     rounds = outcome.rounds
-    if rounds < 4 or not np.isfinite(settling) or settling <= 0:
+    if rounds < FIRST_INTERIOR + 2 or not np.isfinite(settling) or settling <= 0:
         return Known(None, None, "needs four rounds and a settling time")
-    inside = defined_layers(layout, basis, rounds)[1:rounds]
-    probability = outcome.detection[1:rounds]
+    inside = slice(FIRST_INTERIOR - 1, rounds)
+    probability = outcome.detection[inside]
+    assert defined_layers(layout, basis, rounds)[inside].all()
     mean = probability.mean(axis=1)
-    assert inside.all()
     spread = np.sqrt((probability * (1 - probability)).sum(axis=1) / outcome.shots)
     spread /= probability.shape[1]
     turns = np.arange(FIRST_INTERIOR, rounds + 1)
-    design = np.stack([np.ones(rounds - 1), -np.exp((FIRST_INTERIOR - turns) / settling)], axis=1)
+    keep = np.exp((start_layer - turns) / settling)
+    design = np.stack([np.ones(len(turns)), -keep], axis=1)
     scaled = design / spread[:, None]
     covariance = np.linalg.inv(scaled.T @ scaled)
     level, size = covariance @ scaled.T @ (mean / spread)
@@ -198,6 +201,9 @@ def _logical(share: Share | None, layout: Layout, basis: Basis, settling: float)
         "logical_error_per_round_without": Known(fits[1].value, fits[1].error).to_json(),
         "leakage_share": Known(share.value, share.error).to_json(),
         "detection_rise": detection_rise(longest, layout, basis, settling).to_json(),
+        "detection_rise_from_layer_2": detection_rise(
+            longest, layout, basis, settling, FIRST_INTERIOR
+        ).to_json(),
         "logical_fit": [
             {"chi_square": fit.chi_square, "freedom": fit.freedom, "amplitude": fit.amplitude}
             for fit in fits

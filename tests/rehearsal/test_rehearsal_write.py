@@ -14,7 +14,10 @@ from leakpipe.codes.files import layout_from_file
 from leakpipe.codes.repetition import repetition
 from leakpipe.codes.rotated import rotated_surface
 from leakpipe.recordings.opening import chunks, describe_memory, open_calibration
+from leakpipe.rehearsal.counterfactual import Outcome, fit_per_round
 from leakpipe.rehearsal.scenario import Scenario
+from leakpipe.rehearsal.season import epochs
+from leakpipe.rehearsal.truth import detection_rise
 from leakpipe.rehearsal.write import rehearse, up_to_date, write_layout
 
 FALSE_ALARM = 1e-4
@@ -27,6 +30,8 @@ QUICK: dict[str, Any] = {
     "readout": {"calibration_shots": 200, "reference": "good"},
     "truth": {"shots": 2000, "readout_shots": 2000},
 }
+
+NO_TRUTH = {"shots": 0, "readout_shots": 1000}
 
 
 def scenario(**more: Any) -> Scenario:
@@ -160,7 +165,7 @@ def test_rehearsal_is_reproducible_and_kept(tmp_path: Path) -> None:
 def test_one_chunk_or_many(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Recordings written in many chunks hold all their shots, with the clock running on."""
     monkeypatch.setattr("leakpipe.rehearsal.write.CHUNK_READINGS", 2000)
-    folder, _ = written(tmp_path, rounds=(4,), truth={"shots": 0})
+    folder, _ = written(tmp_path, rounds=(4,), truth=NO_TRUTH)
     described = describe_memory(memories(folder)[0], lambda _: rotated_surface(3))
     parts = list(chunks(described, 50))
     iq = np.concatenate([part.iq for part in parts])
@@ -176,7 +181,7 @@ def test_injected_runs_start_leaked(tmp_path: Path) -> None:
         kind="state",
         noise={"seepage": 0.2},
         injected={"qubits": ("D4",), "rounds": (1, 3), "shots": 4000, "probability": 0.9},
-        truth={"shots": 0},
+        truth=NO_TRUTH,
     )
     expected = 0.9
     described = describe_memory(folder / "cal-001-Z-R01-D4-leaked.nc", lambda _: rotated_surface(3))
@@ -206,7 +211,7 @@ def test_two_state_calibration_and_both_bases(tmp_path: Path) -> None:
 def test_season_in_one_folder(tmp_path: Path) -> None:
     """Epochs share a folder; a partial recalibration writes only its qubits."""
     season = {"epochs": 3, "changes": ({"epoch": 2, "recalibrated": ("D1", "M3")},)}
-    folder, truth = written(tmp_path, season=season, rounds=(2, 3), shots=50, truth={"shots": 0})
+    folder, truth = written(tmp_path, season=season, rounds=(2, 3), shots=50, truth=NO_TRUTH)
     assert [one["calibration_id"] for one in truth["epochs"]] == ["cal-001", "cal-002", "cal-003"]
     second = open_calibration(folder / "cal-002-calibration.nc")
     assert set(second.qubit.values) == {"D1", "M3"}
@@ -234,7 +239,64 @@ def test_own_names_bring_a_layout_file(tmp_path: Path) -> None:
         "data": tuple(f"Q{k}" for k in range(9)),
         "measure": tuple(f"A{k}" for k in range(8)),
     }
-    folder, truth = written(tmp_path, code=names, rounds=(2, 3), truth={"shots": 0})
+    folder, truth = written(tmp_path, code=names, rounds=(2, 3), truth=NO_TRUTH)
     layout = layout_from_file(folder / "layout.yaml")
     assert describe_memory(memories(folder)[0], lambda _: layout).frame.layout.data[0] == "Q0"
     assert "layout.yaml" in truth["files"]
+
+
+def test_points_survive_the_file(tmp_path: Path) -> None:
+    """Points in the calibration lie around the fields of the device that the season names."""
+    one = scenario(readout={"calibration_shots": 4000, "reference": "good"}, truth=NO_TRUTH)
+    rehearse(one, tmp_path)
+    iq = open_calibration(tmp_path / "cal-001-calibration.nc")["iq"]
+    for name, qubit in epochs(one)[0].calibrated.items():
+        mean = qubit.to_signal(qubit.fields @ qubit.weights)
+        for state in (0, 1, 2):
+            # The median shrugs off preparation errors and jumps of up to a few percent, which move
+            # it by less than a tenth of the noise.
+            seen = np.median(iq.sel(qubit=name, prepared=state).values, axis=0)
+            width = qubit.integrated_noise * qubit.gain
+            assert abs(complex(*seen) - mean[state]) < 0.2 * width
+
+
+def test_rise_of_a_known_curve() -> None:
+    """A noise-free curve A - B lam^r gives back its rise from round 0 and from layer 2."""
+    layout = rotated_surface(3)
+    layers = np.arange(1, 27)
+    curve = 0.12 - 0.02 * np.exp(-layers / 5.0)
+    outcome = Outcome(25, 1000, 10, np.tile(curve[:, None], 8), np.zeros((25, 17)))
+    rise = detection_rise(outcome, layout, "Z", 5.0)
+    assert rise.value == pytest.approx(0.02 / 0.10)
+    start = 0.02 * np.exp(-2 / 5.0)
+    later = detection_rise(outcome, layout, "Z", 5.0, 2)
+    assert later.value == pytest.approx(start / (0.12 - start))
+    assert detection_rise(outcome, layout, "Z", float("inf")).value is None
+
+
+def failures(eps: float, shots: int, rng: np.random.Generator | None) -> list[Outcome]:
+    """Return outcomes at the closed form, exact or drawn."""
+    found = []
+    for rounds in (1, 3, 9, 25):
+        chance = (1 - (1 - 2 * eps) ** rounds) / 2
+        count = round(shots * chance) if rng is None else rng.binomial(shots, chance)
+        found.append(Outcome(rounds, shots, int(count), np.zeros(1), np.zeros(1)))
+    return found
+
+
+def test_fit_per_round_recovers_the_closed_form() -> None:
+    """eps .02914 gives P .3885667 at 25 rounds, and the fit of such counts gives eps back."""
+    eps = 0.02914
+    assert (1 - (1 - 2 * eps) ** 25) / 2 == pytest.approx(0.3885667, abs=5e-8)
+    exact = fit_per_round(failures(eps, 10**9, None))
+    # Counts are rounded to 1e-9 of the shots.
+    assert exact.value == pytest.approx(eps, abs=1e-8)
+    assert exact.amplitude == pytest.approx(1, abs=1e-7)
+    rng = np.random.default_rng(1)
+    fits = [fit_per_round(failures(eps, 5000, rng)) for _ in range(400)]
+    pulls = np.array([(fit.value - eps) / fit.error for fit in fits])
+    # Mean and standard deviation of 400 standard normal numbers.
+    assert abs(pulls.mean()) < 4 / np.sqrt(400)
+    assert abs(pulls.std() - 1) < 4 / np.sqrt(800)
+    with pytest.raises(ValueError, match="two numbers of rounds"):
+        fit_per_round(failures(eps, 5000, rng)[:2])
