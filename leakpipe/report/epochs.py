@@ -16,7 +16,15 @@ from leakpipe.report.wording import in_rounds, listed, moment, number, percent
 
 IN_ROUNDS = ("settling_rounds",)
 PLAIN = ("kappa",)
-CODE_FIRST = ("leakage_share", "logical_error_per_round", "detection_rise", "settling_rounds")
+CODE_FIRST = (
+    "leakage_share",
+    "logical_error_per_round",
+    "data_steady_leakage",
+    "measure_steady_leakage",
+    "detection_rise",
+    "settling_rounds",
+    "kappa",
+)
 """Quantities of the whole code that are shown first, in this order."""
 
 
@@ -38,14 +46,15 @@ def epochs_page(rows: Iterable[Mapping[str, Any]], flags: Sequence[Any]) -> str:
     Parameters
     ----------
     rows
-        One per epoch, patch, qubit and quantity, with keys ``epoch``, ``acquired_at``, ``patch``,
-        ``qubit`` (None or "" for the whole code), ``quantity``, ``value``, ``low``, ``high`` and
-        ``flags`` (none, a text, or a list; anything not empty marks the epoch).
+        One per epoch, patch, qubit and quantity, with keys ``epoch`` (or ``calibration_id``),
+        ``acquired_at``, ``patch``, ``qubit`` (None or "" for the whole code), ``quantity``,
+        ``value``, ``low``, ``high``; optionally ``basis``, ``device`` and ``flags`` (a text or a
+        list; anything not empty marks the epoch).
     flags
         What moved, the newest last: findings, or dicts with ``severity``, ``where``, ``sentence``
-        and optionally ``epoch``.
+        and optionally ``numbers`` with ``epoch`` and ``quantity``, which mark the epoch as well.
     """
-    rows = list(rows)
+    rows = _marked(list(rows), flags)
     epochs = _epochs(rows)
     series = _series(rows, epochs)
     patches = []
@@ -62,6 +71,34 @@ def epochs_page(rows: Iterable[Mapping[str, Any]], flags: Sequence[Any]) -> str:
         "caution": CAUTION,
     }
     return rendered("epochs.html", content)
+
+
+def _marked(rows: Sequence[Mapping[str, Any]], flags: Sequence[Any]) -> list[dict[str, Any]]:
+    """Return the rows with one name for patch and basis, their epoch, and whether flagged."""
+    several = len({row.get("device") for row in rows}) > 1
+    told = set()
+    for flag in flags:
+        said = _as_dict(flag)
+        numbers = said.get("numbers") or {}
+        told.add((numbers.get("epoch"), numbers.get("quantity"), said.get("where")))
+    marked = []
+    for row in rows:
+        epoch = str(row["epoch"] if "epoch" in row else row["calibration_id"])
+        place = " ".join(filter(None, (str(row["patch"]), str(row.get("basis") or ""))))
+        where = str(row.get("qubit") or "") or place
+        marked.append(
+            {
+                **row,
+                "epoch": epoch,
+                "patch": f"{row['device']} {place}" if several else place,
+                "flags": bool(row.get("flags")) or (epoch, row["quantity"], where) in told,
+            }
+        )
+    return marked
+
+
+def _as_dict(flag: Any) -> dict[str, Any]:
+    return flag.to_json() if isinstance(flag, Finding) else dict(flag)
 
 
 def _epochs(rows: Sequence[Mapping[str, Any]]) -> list[str]:
@@ -163,10 +200,10 @@ def _qubits(mine: Mapping[tuple[str, str], _Series]) -> list[tuple[str, list[dic
 
 
 def _flag(flag: Any) -> dict[str, str]:
-    said: dict[str, Any] = flag.to_json() if isinstance(flag, Finding) else dict(flag)
+    said = _as_dict(flag)
     return {
         "severity": str(said.get("severity", "watch")),
         "where": str(said.get("where", "")),
         "sentence": str(said.get("sentence", "")),
-        "epoch": str(said.get("epoch") or said.get("numbers", {}).get("epoch") or ""),
+        "epoch": str(said.get("epoch") or (said.get("numbers") or {}).get("epoch") or ""),
     }

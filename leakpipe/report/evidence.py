@@ -8,7 +8,7 @@ KINDS: dict[str, tuple[str, ...]] = {
     "leaked readings": ("leaked reading", "measure-qubit reading", "readings of measure"),
     "closing readout": ("closing",),
     "injected runs": ("injected run", "route j"),
-    "verdicts": ("verdict", "decoder", "matching", "logical error"),
+    "logical outcomes": ("verdict", "decoder", "matching", "logical outcome"),
     "rehearsal": ("rehearsal", "twin"),
 }
 """Kind to the words that give it away, in lower case. Stages write bases in plain sentences; a

@@ -86,31 +86,53 @@ def trend(moments: Sequence[Moment], color: str, height: int, top_label: str = "
             f'<text x="0" y="-3" font-size="10" fill="var(--quiet)">'
             f"{escape(top_label)}</text>"
         )
-    parts += [
-        _mark(moment, EDGE + place * step, y_of, color) for place, moment in enumerate(moments)
-    ]
+    parts.append(_intervals(moments, step, y_of, color))
+    parts.append(_values(moments, step, y_of, color))
+    if height >= TALL:
+        parts += [
+            f'<path d="M{EDGE + place * step:.1f} 0V{height}" stroke="transparent" '
+            f'stroke-width="{step:.1f}"><title>{escape(moment.words)}</title></path>'
+            for place, moment in enumerate(moments)
+            if moment.words
+        ]
     return Markup(
         f'<svg class="trend" viewBox="-4 {-room} {TREND_WIDTH + 8} {height + room + 4}" '
         f'aria-hidden="true">{"".join(parts)}</svg>'
     )
 
 
-def _mark(moment: Moment, x: float, y_of: Callable[[float], float], color: str) -> str:
-    """Return one epoch's interval and marker, with its words as a tooltip."""
-    one = moment.estimate
-    parts = [f"<title>{escape(moment.words)}</title>"] if moment.words else []
-    if one.low is not None and one.high is not None:
-        parts.append(
-            f'<path d="M{x:.1f} {y_of(one.low):.1f}V{y_of(one.high):.1f}" '
-            f'stroke="var(--{color})" opacity="0.55"/>'
+def _intervals(
+    moments: Sequence[Moment], step: float, y_of: Callable[[float], float], color: str
+) -> str:
+    """Return all intervals as one path: history pages hold thousands."""
+    lines = [
+        f"M{EDGE + place * step:.1f} {y_of(one.low):.1f}V{y_of(one.high):.1f}"
+        for place, one in enumerate(moment.estimate for moment in moments)
+        if one.low is not None and one.high is not None
+    ]
+    return f'<path d="{"".join(lines)}" stroke="var(--{color})" opacity="0.55"/>'
+
+
+def _values(
+    moments: Sequence[Moment], step: float, y_of: Callable[[float], float], color: str
+) -> str:
+    """Return dots (lines without length and with round ends), and diamonds where flagged."""
+    dots, diamonds = [], []
+    for place, moment in enumerate(moments):
+        if moment.estimate.value is None:
+            continue
+        x, y = EDGE + place * step, y_of(moment.estimate.value)
+        if moment.flagged:
+            diamonds.append(f"M{x:.1f} {y - 6:.1f}l6 6l-6 6l-6 -6z")
+        else:
+            dots.append(f"M{x:.1f} {y:.1f}h0")
+    said = (
+        f'<path class="dots" d="{"".join(dots)}" stroke="var(--{color})" stroke-width="4.8" '
+        f'stroke-linecap="round"/>'
+    )
+    if diamonds:
+        said += (
+            f'<path d="{"".join(diamonds)}" fill="var(--surface)" stroke="var(--ink)" '
+            f'stroke-width="1.6"/>'
         )
-    if one.value is not None and moment.flagged:
-        parts.append(
-            f'<path d="M{x:.1f} {y_of(one.value) - 6:.1f}l6 6l-6 6l-6 -6z" '
-            f'fill="var(--surface)" stroke="var(--ink)" stroke-width="1.6"/>'
-        )
-    elif one.value is not None:
-        parts.append(
-            f'<circle cx="{x:.1f}" cy="{y_of(one.value):.1f}" r="2.4" fill="var(--{color})"/>'
-        )
-    return f"<g>{''.join(parts)}</g>"
+    return said

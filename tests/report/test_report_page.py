@@ -255,8 +255,33 @@ def test_history_has_every_series(pages):
     words = " ".join(reader.text_of("main"))
     assert "Leakage share" in words
     assert "cal-0008" in " ".join(reader.text_of("td"))
-    # 12 epochs, one without a value, one flagged (a diamond instead of a dot).
-    assert len(reader.all("circle")) == 11 + 10
+    # 12 epochs, one without a value, and one of the qubit's flagged: a diamond instead of a dot.
+    dots = [path["d"].count("M") for path in reader.all("path") if path.get("class") == "dots"]
+    assert dots == [11, 10]
+
+
+def test_flags_mark_their_epoch():
+    """A finding marks the epoch, qubit and quantity that it names, and nothing else."""
+    rows = [{**row, "flags": []} for row in season()]
+    numbers = {"epoch": "cal-0005", "quantity": "steady_leakage"}
+    flag = Finding("leakage-changed", "act", "D3", "D3 rose.", numbers)
+    dots = [
+        path["d"].count("M")
+        for path in read(epochs_page(rows, [flag])).all("path")
+        if path.get("class") == "dots"
+    ]
+    assert dots == [11, 10]
+
+
+def test_rows_of_the_history_as_they_are():
+    """Rows with calibration, basis and device are grouped by patch and basis."""
+    rows = []
+    for row in season():
+        bare = {key: value for key, value in row.items() if key not in ("epoch", "flags")}
+        for basis in "ZX":
+            rows.append({**bare, "calibration_id": row["epoch"], "basis": basis, "device": "one"})
+    reader = read(epochs_page(rows, []))
+    assert {"west Z", "west X"} <= set(reader.text_of("h2"))
 
 
 def test_history_in_order_of_recording():

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.ticker import FixedLocator, FuncFormatter, NullFormatter
+from numpy.typing import NDArray
 
 from leakpipe.report.figures.detection import HALF_WIDTH
 from leakpipe.report.figures.style import (
@@ -49,10 +50,8 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     figure = canvas(COLUMN, 3.6, TITLE, place)
     axes = figure.subplots()
     axes.set_yscale("log")
-    for chosen, hollow in (
-        (usable & (rounds >= FIRST_FITTED), False),
-        (usable & (rounds < FIRST_FITTED), True),
-    ):
+    fitted = _fitted(patch, rounds)
+    for chosen, hollow in ((usable & fitted, False), (usable & ~fitted, True)):
         # On a log axis a bar that reaches zero has no lower end: cut it just above zero.
         half = np.minimum(2 * HALF_WIDTH * error[chosen], 0.98 * fidelity[chosen])
         points(axes, rounds[chosen], fidelity[chosen], half, color="data", hollow=hollow)
@@ -75,17 +74,40 @@ def draw(patch: PatchReport, place: str) -> Drawing:
         else ""
     )
     stage = patch.stage("logical")
-    fitted = "" if stage is None else str(stage.attrs.get("range_of_rounds", ""))
-    over = f" over R = {fitted}" if fitted else ""
+    reach = "" if stage is None else str(stage.attrs.get("range_of_rounds", ""))
+    over = f" over R = {reach}" if reach else ""
     return Drawing(
         figure,
         TITLE,
-        f"Points with 95 % intervals; line and band: A (1 - 2 eps)^R fitted{over}. R = 1 (hollow) "
-        "is left out: there is no error history yet. Dashed: the same device without leakage, as "
-        f"far as the share's routes can tell.{lost}",
+        f"Points with 95 % intervals; line and band: A (1 - 2 eps)^R fitted{over}. Hollow points "
+        "are left out of the fit: at R = 1 there is no error history yet. Dashed: the same device "
+        f"without leakage, as far as the share's routes can tell.{lost}",
         f"Logical fidelity falls by {per_round} error per round; without leakage it would be "
         f"{without}.",
     )
+
+
+def _fitted(patch: PatchReport, rounds: Array) -> NDArray[np.bool_]:
+    """Return which recordings the fit used."""
+    used = patch.array("logical", "used", ("recording",))
+    if used is None:
+        return np.asarray(rounds >= FIRST_FITTED)
+    return np.asarray(used > 0)
+
+
+def _measured(patch: PatchReport, axes: Axes) -> tuple[str, str, float] | None:
+    """Draw the logical stage's own curve with its band, where it gives one."""
+    curve = patch.array("logical", "fit_fidelity", ("rounds_axis",))
+    axis = np.asarray(patch.labels("logical", "rounds_axis"), dtype=float)
+    if curve is None or not (np.isfinite(curve) & (curve > 0)).any():
+        return None
+    low = patch.array("logical", "fit_fidelity_low", ("rounds_axis",))
+    high = patch.array("logical", "fit_fidelity_high", ("rounds_axis",))
+    shown = np.isfinite(curve) & (curve > 0)
+    axes.plot(axis[shown], curve[shown], color=LIGHT["data"], linewidth=1.4)
+    if low is not None and high is not None:
+        band(axes, axis, np.where(low > 0, low, np.nan), high, "data")
+    return "measured", "data", float(curve[shown][-1])
 
 
 def _curves(patch: PatchReport, axes: Axes, rounds: Array) -> list[tuple[str, str, float]]:
@@ -94,13 +116,14 @@ def _curves(patch: PatchReport, axes: Axes, rounds: Array) -> list[tuple[str, st
         return []
     smooth = np.linspace(rounds.min(), rounds.max(), 100)
     amplitude = patch.estimate("logical", "amplitude").value
-    ends = []
+    measured = _measured(patch, axes)
+    ends = [] if measured is None else [measured]
     for stage, name, words, color, style in (
         ("logical", "logical_error_per_round", "measured", "data", "-"),
         ("share", "per_round_without", "without\nleakage", "third", (0, (4, 2))),
     ):
         eps = patch.estimate(stage, name)
-        if eps.value is None or amplitude is None:
+        if eps.value is None or amplitude is None or (stage == "logical" and measured):
             continue
         curve = amplitude * (1 - 2 * eps.value) ** smooth
         axes.plot(smooth, curve, color=LIGHT[color], linestyle=style, linewidth=1.4)
