@@ -84,8 +84,22 @@ def find(config: Config) -> Found:
     folder = config.recordings.folder
     if not folder.is_dir():
         raise RecordingError(f"{folder}  is not a folder of recordings")
+    return find_among(config, recording_paths(config))
+
+
+def find_among(config: Config, paths: Sequence[Path]) -> Found:
+    """Check the given recordings of a config's folder and group them into epochs.
+
+    Raises
+    ------
+    ConfigError, LayoutError
+        The code layout is not given or cannot be used.
+    RecordingError
+        There is no recording at all.
+    """
+    folder = config.recordings.folder
     layout = layout_for(config.code, _layout_file(folder))
-    calibrations, memories, problems = _sort(recording_paths(config), layout)
+    calibrations, memories, problems = _sort(paths, layout)
     if config.device is not None:
         calibrations = [one for one in calibrations if one.device == config.device]
         memories = [one for one in memories if one.device == config.device]
