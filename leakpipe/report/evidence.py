@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 KINDS: dict[str, tuple[str, ...]] = {
-    "rise of the means": ("rise", "mean"),
+    "rise of the means": ("rise", "detection probability", "means"),
     "lag covariances": ("covariance", "correlation", "lag "),
     "leaked readings": ("leaked reading", "measure-qubit reading", "readings of measure"),
     "closing readout": ("closing",),

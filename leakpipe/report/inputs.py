@@ -110,6 +110,15 @@ class PatchReport:
             return Estimate.unknown(f"not reported by the {stage} stage{place}")
         return _without_contradiction(found)
 
+    def by_role(self, stage: str, name: str, role: str) -> Estimate:
+        """Return the estimate for all "data" or all "measure" qubits.
+
+        The dimension is called ``role_name`` in a dataset whose ``role`` says what each qubit is.
+        """
+        data = self.stage(stage)
+        dims = () if data is None or name not in data else data[name].dims
+        return self.estimate(stage, name, {"role_name" if "role_name" in dims else "role": role})
+
     def all_findings(self) -> list[Finding]:
         """Return the findings of the patch and of its stages, in the order of the pipeline."""
         stages = [data for name in STAGES if (data := self.stage(name)) is not None]

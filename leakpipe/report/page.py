@@ -124,8 +124,8 @@ def _first(summary: Mapping[str, Any], patches: Sequence[PatchReport]) -> list[_
     items = []
     for finding in act:
         about = [one for one, _ in odd if finding["where"].split(": ")[-1] == one.qubit]
-        couplers = _couplers(about[0], patches) if about else ""
         said = placed(finding["where"], finding["sentence"])
+        couplers = _couplers(about[0], patches, said) if about else ""
         items.append(_Item(f"{said}{couplers}", "act"))
     told = {finding["where"].split(": ")[-1] for finding in act}
     for one, bases in odd:
@@ -142,13 +142,14 @@ def _first(summary: Mapping[str, Any], patches: Sequence[PatchReport]) -> list[_
     return items
 
 
-def _couplers(one: attention.Outlier, patches: Sequence[PatchReport]) -> str:
+def _couplers(one: attention.Outlier, patches: Sequence[PatchReport], said: str = "") -> str:
+    """Return the qubits that share a coupler with this one, unless they were named already."""
     for patch in patches:
         if patch.patch == one.patch and patch.basis == one.basis:
-            try:
-                return f" Its couplers: to {listed(patch.layout.neighbours(one.qubit))}."
-            except KeyError:
+            others = patch.layout.neighbours(one.qubit)
+            if all(name in said for name in others):
                 return ""
+            return f" Its couplers: to {listed(others)}."
     return ""
 
 

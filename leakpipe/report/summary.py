@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Sequence
+from collections.abc import Sequence
 from typing import Any
 
 from leakpipe.findings import Finding, most_severe_first
@@ -94,9 +94,8 @@ def _plain(value: Any) -> float | int | str | None:
 
 
 def _patch(patch: PatchReport) -> dict[str, Any]:
-    def rates(name: str, role: str | None = None) -> dict[str, Any]:
-        where: dict[str, Hashable] | None = None if role is None else {"role": role}
-        return patch.estimate("rates", name, where).to_json()
+    def rates(name: str) -> dict[str, Any]:
+        return patch.estimate("rates", name).to_json()
 
     routes = patch.labels("share", "route")
     return {
@@ -115,13 +114,17 @@ def _patch(patch: PatchReport) -> dict[str, Any]:
         "detection_rise": rates("detection_rise"),
         "settling_rounds": rates("settling_rounds"),
         "kappa": rates("kappa"),
-        **{name: {role: rates(name, role) for role in ROLES} for name in PER_ROLE},
+        **{name: _by_role(patch, name) for name in PER_ROLE},
         "qubits": [
             _qubit(patch, qubit, role)
             for role, names in zip(ROLES, (patch.layout.data, patch.layout.measure), strict=True)
             for qubit in names
         ],
     }
+
+
+def _by_role(patch: PatchReport, name: str) -> dict[str, Any]:
+    return {role: patch.by_role("rates", name, role).to_json() for role in ROLES}
 
 
 def _qubit(patch: PatchReport, qubit: str, role: str) -> dict[str, Any]:

@@ -104,7 +104,7 @@ def qubit_tables(summary: Mapping[str, Any], patches: Sequence[PatchReport]) -> 
             "right readings",
         ]
         if worst:
-            heads.append("chance to be the worst")
+            heads.append("chance to be the worst of its kind")
         tops = [qubit["steady_leakage"]["high"] or 0.0 for qubit in part["qubits"]]
         largest = max(tops, default=0.0)
         rows = [_row(qubit, largest, odd, worst) for qubit in part["qubits"]]

@@ -180,7 +180,7 @@ def rates(layout: Layout, rng: np.random.Generator, longest: int, usable: bool) 
             **{
                 k: v
                 for name, cells in by_role.items()
-                for k, v in store(name, ("role_class",), cells).items()
+                for k, v in store(name, ("role_name",), cells).items()
             },
             **{
                 k: v
@@ -195,21 +195,21 @@ def rates(layout: Layout, rng: np.random.Generator, longest: int, usable: bool) 
             "lag_covariance": ("lag", law + rng.normal(0, 5e-5, lags.size) + (lags < 2) * 0.02),
             "lag_covariance_error": ("lag", np.full(lags.size, 5e-5)),
             "lag_covariance_fit": ("lag", law),
-            "expected_leaked": (("role_class", "round"), expected),
-            "expected_leaked_low": (("role_class", "round"), expected * 0.9),
-            "expected_leaked_high": (("role_class", "round"), expected * 1.1),
+            "expected_leaked": (("role_name", "round"), expected),
+            "expected_leaked_low": (("role_name", "round"), expected * 0.9),
+            "expected_leaked_high": (("role_name", "round"), expected * 1.1),
             "worst_probability": ("qubit", worst),
         },
         coords={
             "qubit": qubits,
-            "qubit_role": ("qubit", roles),
+            "role": ("qubit", roles),
             "weight": weights,
             "layer": layers,
             "round": np.arange(1, longest + 1),
             "lag": lags,
-            "role_class": ["data", "measure"],
+            "role_name": ["data", "measure"],
         },
-    ).rename(role_class="role")
+    )
     finding = Finding(
         "leakage-outlier",
         "act",

@@ -118,7 +118,17 @@ def test_values_are_those_of_the_datasets(patch):
     for qubit in made["qubits"]:
         value = stored["qubit_steady_leakage"].sel(qubit=qubit["qubit"]).item()
         assert qubit["steady_leakage"]["value"] == value
-    assert made["seepage"]["measure"]["high"] == stored["seepage_high"].sel(role="measure").item()
+    assert (
+        made["seepage"]["measure"]["high"] == stored["seepage_high"].sel(role_name="measure").item()
+    )
+
+
+@pytest.mark.parametrize("dim", ["role", "role_name"])
+def test_both_names_of_the_role_dimension(patch, dim):
+    """The dimension over the two roles is found under either of its names."""
+    stored = patch.stages["rates"].drop_vars("role").rename(role_name=dim)
+    made = summary([replace(patch, stages={**patch.stages, "rates": stored})])["patches"][0]
+    assert made["steady_leakage"] == summary([patch])["patches"][0]["steady_leakage"]
 
 
 def test_value_without_identifiability_is_dropped(patch):

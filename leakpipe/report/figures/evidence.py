@@ -34,7 +34,10 @@ def draw(patch: PatchReport, place: str) -> Drawing:
         No stage has a result.
     """
     found = [
-        (words, patch.estimate(stage, name, None if role is None else {"role": role}))
+        (
+            words,
+            patch.estimate(stage, name) if role is None else patch.by_role(stage, name, role),
+        )
         for words, stage, name, role in ROWS
     ]
     if not any(estimate.identifiable for _, estimate in found):

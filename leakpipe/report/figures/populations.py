@@ -34,7 +34,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     """
     measure = measure_points(patch)
     data = closing_points(patch)
-    expected = patch.array("rates", "expected_leaked", ("role", "round"))
+    expected = patch.array("rates", "expected_leaked", (_role_dim(patch), "round"))
     if expected is not None and not np.isfinite(expected).any():
         expected = None
     if measure is None and data is None and expected is None:
@@ -79,6 +79,12 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     )
 
 
+def _role_dim(patch: PatchReport) -> str:
+    """Return the name of the dimension over data and measure qubits of the rates stage."""
+    data = patch.stage("rates")
+    return "role_name" if data is not None and "role_name" in data.dims else "role"
+
+
 def _curves(
     patch: PatchReport, axes: Axes, expected: Array | None
 ) -> list[tuple[str, float, float]]:
@@ -86,10 +92,10 @@ def _curves(
     if expected is None:
         return []
     rounds = np.asarray(patch.labels("rates", "round"), dtype=float)
-    low = patch.array("rates", "expected_leaked_low", ("role", "round"))
-    high = patch.array("rates", "expected_leaked_high", ("role", "round"))
+    low = patch.array("rates", "expected_leaked_low", (_role_dim(patch), "round"))
+    high = patch.array("rates", "expected_leaked_high", (_role_dim(patch), "round"))
     ends = []
-    for row, role in enumerate(patch.labels("rates", "role")):
+    for row, role in enumerate(patch.labels("rates", _role_dim(patch))):
         known = np.isfinite(expected[row])
         if role not in ("data", "measure") or not known.any():
             continue
