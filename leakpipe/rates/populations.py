@@ -1,7 +1,7 @@
 """Steady level and memory of every qubit of a role from its leaked populations.
 
 A qubit's leaked population after r rounds is p_k (1 - lam_k^r) + p0_k lam_k^r. The lam_k of a
-role's qubits are drawn together: lam_k ~ N(mu, s^2), with mu and s estimated from all of them and, for
+role's qubits are drawn together: lam_k ~ N(mu, s^2), with mu and s estimated from all and, for
 mu, from other data such as correlations (empirical Bayes; the spread by expectation maximisation,
 DerSimonian and Laird, Control. Clin. Trials 7, 177 (1986), for the moment form). A qubit whose own
 data say little then leans on the others; how much is part of its interval.

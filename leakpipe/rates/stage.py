@@ -95,7 +95,7 @@ def rates(
     expected = [_expected(roles[role], rounds) for role in ROLES]
     for position, suffix in enumerate(("", "_low", "_high")):
         variables[f"expected_leaked{suffix}"] = (
-            ("role_name", "round"),
+            ("role", "round"),
             np.stack([one[position] for one in expected]),
             {"units": "1"},
         )
@@ -104,8 +104,11 @@ def rates(
         variables,
         coords={
             "qubit": qubits,
-            "role": ("qubit", ["data"] * len(layout.data) + ["measure"] * len(layout.measure)),
-            "role_name": list(ROLES),
+            "qubit_role": (
+                "qubit",
+                ["data"] * len(layout.data) + ["measure"] * len(layout.measure),
+            ),
+            "role": list(ROLES),
             "check": list(layout.measure),
             "round": detection["round"].values,
             "layer": detection["layer"].values,
@@ -456,7 +459,7 @@ def _role_estimates(roles: dict[str, _Role]) -> dict[Any, Any]:
         seepage.append(_interval(s.mean(), np.nanmean(s_draw, axis=1), basis, 0, 1))
         spread = float(np.std(np.nanmean(one.memories, axis=1), ddof=1))
         settling.append(_tau(float(fit.memory.mean()), spread, basis))
-    dims = ("role_name",)
+    dims = ("role",)
     return {
         **store("steady_leakage", dims, level),
         **store("injection", dims, injection, units="per round"),
@@ -672,7 +675,7 @@ def _findings(
             )
         )
     for role in ROLES:
-        mask = out["role"].values == role
+        mask = out["qubit_role"].values == role
         levels = out["qubit_steady_leakage"].values[mask]
         if not np.isfinite(levels).any():
             continue

@@ -26,6 +26,9 @@ LEAST = 1e-4
 """Smallest failure probability that the likelihood is evaluated at."""
 LARGEST_COST = 0.5
 """A full randomisation of the logical value."""
+FULL_PRIOR, MEMORY_PRIOR = (0.3, 0.2), (0.6, 0.3)
+"""Weak normal priors of kappa_inf and rho (mean, deviation): few leaked closing readings tell their
+product only. Our choice, wide enough to cover every rehearsed device."""
 STEP = 1e-4
 
 
@@ -75,7 +78,7 @@ class Regression:
     log_measure
         c.
     at_bound
-        True if a cost or the memory ended on the edge of its range.
+        True if both the full cost and its memory ended on the edge of their ranges.
     """
 
     measure_cost: float
@@ -128,8 +131,10 @@ def fit(shots: Shots, ending: float) -> Regression:
                 ],
             ]
         )
+        pull, slope = _prior(theta[groups + 1], theta[groups + 2])
+        gradient[groups + 1 :] += slope
         size = len(shots.failed)
-        return -one.value / size, -gradient / size
+        return -(one.value + pull) / size, -gradient / size
 
     found = minimize(
         loss, begin, jac=True, method="L-BFGS-B", bounds=bounds, options={"maxiter": 500}
@@ -137,7 +142,7 @@ def fit(shots: Shots, ending: float) -> Regression:
     theta = found.x
     covariance = _sandwich(shots, theta, ending, groups)
     c, full, memory = theta[groups:]
-    at_bound = abs(full) > LARGEST_COST - 1e-3 or memory > 0.975
+    at_bound = abs(full) > LARGEST_COST - 1e-4 and memory > 0.97
     return Regression(
         measure_cost=float((1 - np.exp(c)) / 2),
         full=float(full),
@@ -186,6 +191,14 @@ def _evaluate(shots: Shots, theta: FloatArray, ending: float) -> _Evaluation:
     )
 
 
+def _prior(full: float, memory: float) -> tuple[float, FloatArray]:
+    """Return the log prior of (kappa_inf, rho) and its slope."""
+    gap = np.array(
+        [(full - FULL_PRIOR[0]) / FULL_PRIOR[1], (memory - MEMORY_PRIOR[0]) / MEMORY_PRIOR[1]]
+    )
+    return float(-0.5 * gap @ gap), -gap / np.array([FULL_PRIOR[1], MEMORY_PRIOR[1]])
+
+
 def _sandwich(shots: Shots, theta: FloatArray, ending: float, groups: int) -> FloatArray:
     """Return the covariance of (c, kappa_inf, rho): H^-1 (sum of cluster score products) H^-1."""
     one = _evaluate(shots, theta, ending)
@@ -205,6 +218,8 @@ def _sandwich(shots: Shots, theta: FloatArray, ending: float, groups: int) -> Fl
         expand[g, 2, groups + 2] = one.by_memory[g]
     scores = np.einsum("ca,cap->cp", sums, expand[home])
     information = np.einsum("abg,gap,gbq->pq", products, expand, expand)
-    ridge = 1e-9 * np.diag(np.maximum(np.diag(information), 1e-12))
-    bread = np.linalg.inv(information + ridge)
-    return np.asarray((bread @ scores.T @ scores @ bread)[groups:, groups:])
+    prior = np.zeros_like(information)
+    prior[groups + 1, groups + 1] = FULL_PRIOR[1] ** -2
+    prior[groups + 2, groups + 2] = MEMORY_PRIOR[1] ** -2
+    bread = np.linalg.inv(information + prior + 1e-12 * np.eye(groups + 3))
+    return np.asarray((bread @ (scores.T @ scores + prior) @ bread)[groups:, groups:])
