@@ -16,7 +16,14 @@ from leakpipe.codes.events import defined_layers
 from leakpipe.codes.layout import Basis, Layout
 from leakpipe.rehearsal.counterfactual import DecoderFor, Outcome, Setting, Share, share_truth
 from leakpipe.rehearsal.labels import assignments
-from leakpipe.rehearsal.populations import LeakageRates, expected_leaked, leakage_rates
+from leakpipe.rehearsal.populations import (
+    SETTLING_ROUNDS,
+    LeakageRates,
+    code_settling,
+    expected_leaked,
+    leakage_rates,
+    settled_leaked,
+)
 from leakpipe.rehearsal.readout import jump_probability
 from leakpipe.rehearsal.scenario import Scenario
 from leakpipe.rehearsal.season import TRUTH, Epoch, stream
@@ -25,16 +32,21 @@ DEFINITIONS = {
     "leaked": "population outside 0 and 1 at the end of a round, when the qubit is read",
     "injection": "G of p[r+1] = p[r] + G (1 - p[r]) - S p[r], per round; of a role: mean of qubits",
     "seepage": "S of the same recurrence; of a role: mean of its qubits",
-    "steady_leakage": "G / (G + S); of a role: mean of its qubits",
+    "steady_leakage": "population after many rounds, G / (G + S) without transport; of a role: "
+    "mean of its qubits",
     "settling_rounds": "-1 / ln(1 - G - S); of the code: the time at which the leaked data and "
-    "measure population together has covered 1 - 1/e of its way to the steady level",
+    "measure population together has covered 1 - 1/e of its way from round 1 to the steady level",
     "detection_rise": "steady level over start minus one of the mean over checks; start: the "
     "settling law continued to round 0; from_layer_2: start at the first interior layer",
     "logical_error_per_round": "1 - 2 P(R) = A (1 - 2 eps)^R over the recordings' R, R = 1 left "
     "out; hard labels of the device, matching decoder",
     "leakage_share": "(eps with - eps without) / eps with, same decoder, injection set to zero",
+    "assignment": "mean probability that a qubit prepared in 0 is read 0 and one prepared in 1 is "
+    "read 1, preparation errors included; assignment_matrix: label given true start state",
     "kappa": "2 v, v the probability that a leaked qubit flips the outcome of its check",
 }
+
+COUPLED = "transport couples the qubits: steady levels by mean field, rates without their partners"
 
 FIRST_INTERIOR = 2
 """First layer in which every check compares two rounds."""
@@ -56,27 +68,6 @@ class Known:
             "error": None if self.error is None or not finite else float(self.error),
         }
         return entry | ({"reason": self.reason} if self.reason else {})
-
-
-def code_settling(rates: LeakageRates) -> float:
-    """Return the time in which the summed leaked population covers 1 - 1/e of its way, in rounds.
-
-    Qubits whose level is high weigh more; with equal rates it is the common settling time.
-    """
-    from scipy.optimize import brentq
-
-    level = rates.steady_leakage
-    keep = np.clip(1 - rates.injection - rates.seepage, 0, 1)
-    if level.sum() == 0:
-        return float("nan")
-
-    def left(rounds: float) -> float:
-        return float((level * keep**rounds).sum() / level.sum() - np.exp(-1))
-
-    longest = float(rates.settling_rounds[level > 0].max())
-    if not np.isfinite(longest):
-        return float("inf")
-    return float(brentq(left, 0.0, 50 * max(longest, 1e-3)))
 
 
 def detection_rise(
@@ -119,11 +110,12 @@ def patch_truth(
     table = assignments([epoch.running[name] for name in names], scenario.truth.readout_shots, rng)
     setting = Setting(layout, basis, epoch.noise, table, reset)
     path = expected_leaked(layout, epoch.noise, max(scenario.rounds), reset=reset)
+    steady = settled_leaked(layout, epoch.noise, reset=reset)
     data = len(layout.data)
     roles = {"data": slice(0, data), "measure": slice(data, None)}
-    settling = code_settling(rates)
-    coupled = epoch.noise.transport > 0
-    reason = "transport couples the qubits: rates without their partners" if coupled else ""
+    long = expected_leaked(layout, epoch.noise, SETTLING_ROUNDS, reset=reset)
+    settling = code_settling(long, steady)
+    reason = COUPLED if epoch.noise.transport > 0 else ""
 
     def mean_of(values: NDArray[np.float64]) -> dict[str, Any]:
         return {
@@ -139,11 +131,12 @@ def patch_truth(
         "rounds": sorted(scenario.rounds),
         "settling_rounds": Known(settling, 0.0, reason).to_json(),
         "kappa": Known(_kappa(layout, epoch)).to_json(),
-        "steady_leakage": mean_of(rates.steady_leakage),
+        "steady_leakage": mean_of(steady),
         "injection": mean_of(rates.injection),
         "seepage": mean_of(rates.seepage),
         "qubits": [
-            _qubit(epoch, names, index, data, rates, table, path) for index in range(len(names))
+            _qubit(epoch, names, index, data, rates, steady, table, path)
+            for index in range(len(names))
         ],
         "leaked_by_round": {
             role: path[:, part].mean(axis=1).tolist() for role, part in roles.items()
@@ -168,20 +161,28 @@ def _qubit(
     index: int,
     data: int,
     rates: LeakageRates,
+    steady: NDArray[np.float64],
     table: NDArray[np.float64],
     path: NDArray[np.float64],
 ) -> dict[str, Any]:
     readout = epoch.running[names[index]]
     shown = {
-        name: Known(float(getattr(rates, name)[index])).to_json()
-        for name in ("steady_leakage", "injection", "seepage", "settling_rounds")
+        name: Known(float(values[index])).to_json()
+        for name, values in (
+            ("steady_leakage", steady),
+            ("injection", rates.injection),
+            ("seepage", rates.seepage),
+            ("settling_rounds", rates.settling_rounds),
+        )
     }
+    # As prepared: what a calibration shows, its preparation errors counted as wrong readings.
+    prepared = np.array(readout.preparation) @ table[index]
     return {
         "qubit": names[index],
         "role": "data" if index < data else "measure",
         **shown,
         "leaked_at_last_round": float(path[-1, index]),
-        "assignment": float(np.diagonal(table[index]).mean()),
+        "assignment": float((prepared[0, 0] + prepared[1, 1]) / 2),
         "assignment_matrix": table[index].tolist(),
         "separations": readout.separations.tolist(),
         "jump_probability": jump_probability(readout).tolist(),
