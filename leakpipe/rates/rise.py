@@ -91,7 +91,7 @@ class RiseFit:
         return np.sqrt(np.maximum(np.einsum("ra,ab,rb->r", jacobian, self.covariance, jacobian), 0))
 
 
-NO_DATA = RiseFit("no data", *([float("nan")] * 11), covariance=np.full((3, 3), np.nan))
+NO_DATA = RiseFit("no data", *([float("nan")] * 11), np.full((3, 3), np.nan))
 
 
 def fit_rise(
