@@ -96,6 +96,12 @@ class PatchReport:
         data = self.stage(stage)
         return [] if data is None or name not in data.variables else data[name].values.tolist()
 
+    def rows_of_model(self) -> tuple[list[str], list[int]]:
+        """Return the layout's qubits that the readout model has, and their rows in it."""
+        names = [str(name) for name in self.labels("model", "qubit")]
+        qubits = [q for q in (*self.layout.data, *self.layout.measure) if q in names]
+        return qubits, [names.index(qubit) for qubit in qubits]
+
     def estimate(
         self, stage: str, name: str, where: Mapping[str, Hashable] | None = None
     ) -> Estimate:

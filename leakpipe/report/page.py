@@ -21,6 +21,7 @@ from leakpipe.report.wording import listed, percent
 SECTIONS = (
     ("verdict", "Verdict"),
     ("first", "What to look at first"),
+    ("numbers", "Key numbers"),
     ("figures", "Figures"),
     ("qubits", "Qubits"),
     ("routes", "Routes of the share"),

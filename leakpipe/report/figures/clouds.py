@@ -117,8 +117,10 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     found = _means(patch)
     if found is None:
         raise NothingToDraw("no readout model (the recordings hold states, not points)")
-    means, covariance = found
-    qubits = patch.labels("model", "qubit")
+    qubits, order = patch.rows_of_model()
+    if not qubits:
+        raise NothingToDraw("the readout model has none of the layout's qubits")
+    means, covariance = found[0][order], found[1][order]
     columns = 5 if len(qubits) <= 25 else 7
     rows = -(-len(qubits) // columns)
     figure = canvas(FULL, 0.75 + FULL / columns * 0.86 * rows, TITLE, place)
@@ -126,7 +128,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     for panel in panels:
         panel.axis("off")
     for panel, name, mean, spread in zip(panels, qubits, means, covariance, strict=False):
-        panel.set_title(short_name(str(name)), size=8, pad=2)
+        panel.set_title(short_name(name), size=8, pad=2)
         known = np.isfinite(mean).all(axis=1)
         if known.sum() < 2 or not np.isfinite(spread).all():
             panel.text(0.5, 0.5, "no model", ha="center", va="center", size=8)

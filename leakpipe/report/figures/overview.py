@@ -35,10 +35,12 @@ def draw(patch: PatchReport, place: str) -> Drawing:
         There is no readout model.
     """
     apart = separations(patch)
-    qubits = [str(name) for name in patch.labels("model", "qubit")]
-    if apart is None:
+    qubits, rows = patch.rows_of_model()
+    if apart is None or not qubits:
         raise NothingToDraw("no readout model (the recordings hold states, not points)")
+    apart = apart[rows]
     ratio = patch.array("model", "error_ratio", ("qubit",))
+    ratio = None if ratio is None else ratio[rows]
     strips = 2 if ratio is None else 3
     wide = len(qubits) > MANY
     figure = canvas(FULL if wide else COLUMN, 0.9 + 1.35 * strips, TITLE, place)
