@@ -35,7 +35,7 @@ _TO_UNIT = 2.0**-53
 Words = NDArray[np.uint64]
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _next(random: Words) -> Any:
     """Return the next 64 random bits (xoshiro256++)."""
     total = random[0] + random[3]
@@ -50,14 +50,14 @@ def _next(random: Words) -> Any:
     return result
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _unit(random: Words) -> float:
     """Return a uniform number in [0, 1)."""
     value: float = (_next(random) >> uint64(11)) * _TO_UNIT
     return value
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _exponential(random: Words) -> float:
     """Return an exponential number of mean 1."""
     value: float = -np.log(((_next(random) >> uint64(11)) + uint64(1)) * _TO_UNIT)
@@ -139,7 +139,7 @@ def _seep(x: Words, z: Words, leak: Words, probability: float, random: Words) ->
                 z[word] = (z[word] & ~bit) | (_next(random) & bit)
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _chosen(mask: Any, probability: float, random: Words) -> Any:
     """Keep each set bit of a word with the given probability."""
     if probability >= 1.0:

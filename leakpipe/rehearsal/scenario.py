@@ -151,7 +151,7 @@ class ChangeScenario(Section):
     """Number of the epoch, from 1."""
     factors: Factors = Field(default_factory=dict)
     """Factors on the noise of single qubits, as in `noise.factors`."""
-    recalibrated: tuple[str, ...] | None = None
+    recalibrated: Annotated[tuple[str, ...], Field(min_length=1)] | None = None
     """Only these qubits are in this epoch's calibration; their readout phase and gain change."""
     drift: DriftScenario | None = None
     """Readout drift of this epoch alone."""
@@ -226,6 +226,23 @@ class Scenario(Section):
     """Epochs."""
     truth: TruthScenario = Field(default_factory=TruthScenario)
     """How the truth is found."""
+
+    @model_validator(mode="after")
+    def _once_each(self) -> Scenario:
+        for name, values in (("rounds", self.rounds), ("bases", self.bases)):
+            if not values or len(set(values)) != len(values):
+                raise ValueError(f"{name} must hold one or more different values")
+        made = self.injected
+        if made is not None and (
+            not made.rounds
+            or min(made.rounds) < made.round
+            or len(set(made.rounds)) != len(made.rounds)
+            or len(set(made.qubits)) != len(made.qubits)
+        ):
+            raise ValueError(
+                "injected must hold different qubits and different rounds, none before its round"
+            )
+        return self
 
     @property
     def fingerprint(self) -> str:

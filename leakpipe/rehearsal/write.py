@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import json
 import os
-import shutil
-from collections.abc import Iterator
 from datetime import timedelta
 from functools import partial
 from pathlib import Path
@@ -19,18 +17,23 @@ from leakpipe import __version__
 from leakpipe.codes.layout import Basis, Layout
 from leakpipe.codes.matching import matching_decoder
 from leakpipe.progress import Reporter, Silent
-from leakpipe.recordings.shots import BLOCK, Chunk, Frame
+from leakpipe.recordings.shots import BLOCK, Chunk
 from leakpipe.recordings.writing import MemoryWriter, write_calibration
 from leakpipe.rehearsal.counterfactual import Decode, Setting, failed
 from leakpipe.rehearsal.memory import MemoryShots, simulate
-from leakpipe.rehearsal.noise import Injected
 from leakpipe.rehearsal.reading import read
 from leakpipe.rehearsal.readout import points, prepare, traces
+from leakpipe.rehearsal.runs import SUFFIX, Run, calibration_name, file_names, shuffled
 from leakpipe.rehearsal.scenario import Scenario
-from leakpipe.rehearsal.season import CALIBRATION, MEMORY, ORDER, Epoch, epochs, layouts, stream
+from leakpipe.rehearsal.season import CALIBRATION, MEMORY, Epoch, epochs, layouts, stream
 from leakpipe.rehearsal.truth import DEFINITIONS, patch_truth
 
 TRUTH_FILE = "truth.json"
+LAYOUT_FILE = "layout.yaml"
+
+STARTED_FILE = ".rehearsal-started.json"
+"""Names what an unfinished rehearsal was going to write, so that the next one can clear it."""
+
 TRUTH_CONTRACT = "1"
 
 CHUNK_READINGS = 1 << 22
@@ -88,17 +91,22 @@ def rehearse(scenario: Scenario, out: Path, reporter: Reporter | None = None) ->
     """
     reporter = reporter or Silent()
     plan = epochs(scenario)
+    named = bool(scenario.code.data or scenario.code.measure)
+    names = [*([LAYOUT_FILE] if named else []), *file_names(scenario, plan)]
     out.mkdir(parents=True, exist_ok=True)
     _remove_earlier(out)
-    files = []
-    if scenario.code.data or scenario.code.measure:
-        layout = next(iter(layouts(scenario).values()))
-        files.append(write_layout(layout, out / "layout.yaml"))
+    _write_json(out / STARTED_FILE, {"files": names})
+    if named:
+        write_layout(next(iter(layouts(scenario).values())), out / LAYOUT_FILE)
     told = []
     for epoch in plan:
-        with reporter.step(f"rehearsing {epoch.calibration_id}", _recordings(scenario)) as step:
-            for path in _epoch_files(scenario, epoch, out):
-                files.append(path)
+        made = shuffled(scenario, epoch)
+        with reporter.step(f"rehearsing {epoch.calibration_id}", 1 + len(made)) as step:
+            _calibration(scenario, epoch, out / calibration_name(epoch))
+            step.advance()
+            clock = PAUSE_SECONDS
+            for run in made:
+                clock = PAUSE_SECONDS + _memory(scenario, epoch, run, out, clock)
                 step.advance()
         with reporter.step(f"truth of {epoch.calibration_id}") as step:
             told.append(_epoch_truth(scenario, epoch))
@@ -110,32 +118,30 @@ def rehearse(scenario: Scenario, out: Path, reporter: Reporter | None = None) ->
         "device": scenario.device,
         "definitions": DEFINITIONS,
         "epochs": told,
-        "files": {path.name: path.stat().st_size for path in files},
+        "files": {name: (out / name).stat().st_size for name in names},
     }
-    beside = out / f".{TRUTH_FILE}.new"
-    beside.write_text(json.dumps(truth, indent=1, allow_nan=False) + "\n", encoding="utf-8")
-    os.replace(beside, out / TRUTH_FILE)
+    _write_json(out / TRUTH_FILE, truth)
+    (out / STARTED_FILE).unlink()
+
+
+def _write_json(path: Path, content: dict[str, Any]) -> None:
+    """Write beside the final place and rename, so that a reader never sees half a file."""
+    beside = path.with_name(f".{path.name}.part")
+    beside.write_text(json.dumps(content, indent=1, allow_nan=False) + "\n", encoding="utf-8")
+    os.replace(beside, path)
 
 
 def _remove_earlier(out: Path) -> None:
-    try:
-        names = json.loads((out / TRUTH_FILE).read_text(encoding="utf-8"))["files"]
-    except (OSError, ValueError, KeyError):
-        return
-    (out / TRUTH_FILE).unlink()
-    for name in names:
-        path = out / Path(name).name
-        if path.is_dir():
-            shutil.rmtree(path)
-        else:
-            path.unlink(missing_ok=True)
-
-
-def _recordings(scenario: Scenario) -> int:
-    injected = scenario.injected
-    runs = len(scenario.rounds)
-    runs += len(injected.qubits) * len(injected.rounds) if injected else 0
-    return 1 + runs * len(scenario.bases)
+    """Remove what an earlier rehearsal made, finished or not; other files are left alone."""
+    for record in (TRUTH_FILE, STARTED_FILE):
+        try:
+            names = json.loads((out / record).read_text(encoding="utf-8"))["files"]
+        except (OSError, ValueError, KeyError):
+            continue
+        # The record of what to remove goes last: a kill in between leaves it for the next time.
+        for name in names:
+            (out / Path(name).name).unlink(missing_ok=True)
+        (out / record).unlink()
 
 
 def write_layout(layout: Layout, path: Path) -> Path:
@@ -161,60 +167,22 @@ def write_layout(layout: Layout, path: Path) -> Path:
     return path
 
 
-def _epoch_files(scenario: Scenario, epoch: Epoch, out: Path) -> Iterator[Path]:
-    yield _calibration(scenario, epoch, out / f"{epoch.calibration_id}-calibration.nc")
-    runs: list[tuple[Basis, int, int, Injected | None]] = []
-    for basis in scenario.bases:
-        runs += [(basis, rounds, scenario.shots, None) for rounds in scenario.rounds]
-        if scenario.injected is not None:
-            runs += [
-                (
-                    basis,
-                    rounds,
-                    scenario.injected.shots,
-                    Injected(qubit, scenario.injected.round, scenario.injected.probability),
-                )
-                for qubit in scenario.injected.qubits
-                for rounds in scenario.injected.rounds
-            ]
-    # Shuffled in time, so that slow drift does not look like an effect of the number of rounds.
-    order = stream(scenario, ORDER, epoch.number).permutation(len(runs))
-    clock = PAUSE_SECONDS
-    for index in order:
-        basis, rounds, shots, injected = runs[index]
-        rng = stream(scenario, MEMORY, epoch.number, int(index))
-        stem = f"{epoch.calibration_id}-{basis}-R{rounds:02d}"
-        if injected is not None:
-            stem += f"-{injected.qubit}-leaked"
-        frame = Frame(
-            name=stem,
-            layout=layouts(scenario)[basis],
-            basis=basis,
-            rounds=rounds,
-            shots=shots,
-            reset=scenario.reset == "each round",
-            injected=None
-            if injected is None
-            else (injected.qubit, injected.round, injected.probability),
-        )
-        path = out / f"{stem}.nc"
-        clock = _memory(scenario, epoch, frame, path, clock, rng) + PAUSE_SECONDS
-        yield path
-
-
-def _calibration(scenario: Scenario, epoch: Epoch, path: Path) -> Path:
+def _calibration(scenario: Scenario, epoch: Epoch, path: Path) -> None:
     shots = scenario.readout.calibration_shots
     rng = stream(scenario, CALIBRATION, epoch.number)
-    readings = []
-    for qubit in epoch.calibrated.values():
+    signal: NDArray[Any] | None = None
+    for index, qubit in enumerate(epoch.calibrated.values()):
         starts = np.stack(
             [prepare(qubit, state, shots, rng) for state in scenario.readout.prepared]
         )
-        drawn = traces if scenario.kind == "trace" else points
-        readings.append(drawn(qubit, starts, rng))
+        drawn = (traces if scenario.kind == "trace" else points)(qubit, starts, rng)
+        if signal is None:
+            signal = np.empty((len(epoch.calibrated), *drawn.shape), dtype=drawn.dtype)
+        signal[index] = drawn
+    assert signal is not None
     write_calibration(
         path,
-        np.stack(readings),
+        signal,
         prepared=scenario.readout.prepared,
         qubits=tuple(epoch.calibrated),
         calibration_id=epoch.calibration_id,
@@ -222,7 +190,6 @@ def _calibration(scenario: Scenario, epoch: Epoch, path: Path) -> Path:
         device=scenario.device,
         sample_ns=_sample_times(scenario, epoch),
     )
-    return path
 
 
 def _sample_times(scenario: Scenario, epoch: Epoch) -> list[float]:
@@ -233,15 +200,10 @@ def _sample_times(scenario: Scenario, epoch: Epoch) -> list[float]:
     return [(index + 0.5) * qubit.sample_ns for index in range(qubit.samples)]
 
 
-def _memory(
-    scenario: Scenario,
-    epoch: Epoch,
-    frame: Frame,
-    path: Path,
-    clock: float,
-    rng: np.random.Generator,
-) -> float:
+def _memory(scenario: Scenario, epoch: Epoch, run: Run, out: Path, clock: float) -> float:
     """Write one memory recording and return the time of its end in seconds."""
+    rng = stream(scenario, MEMORY, epoch.number, run.number)
+    frame = run.frame(scenario, epoch)
     layout = frame.layout
     per_shot = frame.rounds * len(layout.measure) + len(layout.data)
     if scenario.kind == "trace":
@@ -249,10 +211,9 @@ def _memory(
     size = max(CHUNK_READINGS // per_shot // BLOCK, 1) * BLOCK
     decode = decoder_for(layout, frame.basis, frame.rounds) if scenario.verdict else None
     setting = Setting(layout, frame.basis, epoch.noise, None, frame.reset)
-    injected = None if frame.injected is None else Injected(*frame.injected)
     period = (frame.rounds * ROUND_US + IDLE_US) * 1e-6
     with MemoryWriter(
-        path,
+        out / f"{frame.name}{SUFFIX}",
         frame,
         {
             "calibration_id": epoch.calibration_id,
@@ -274,7 +235,7 @@ def _memory(
                 count,
                 epoch.noise,
                 rng,
-                injected,
+                run.injected,
                 reset=frame.reset,
             )
             started = np.asarray(clock + period * (first + np.arange(count)), dtype=float)

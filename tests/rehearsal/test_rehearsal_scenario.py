@@ -50,6 +50,9 @@ def test_demo_scenario_is_valid() -> None:
         ("readout: {prepared: [0, 2]}\n", r"prepared must be \[0, 1\]"),
         ("code: {distance: 1}\n", "distance"),
         ("truth: {shots: -1}\n", "truth.shots  must be >= 0"),
+        ("bases: [Z, Z]\n", "bases must hold one or more different"),
+        ("injected: {qubits: [D1], rounds: [2], shots: 9, round: 3}\n", "none before its round"),
+        ("season: {changes: [{epoch: 1, recalibrated: []}]}\n", "recalibrated"),
     ],
 )
 def test_mistakes_are_named_with_their_place(tmp_path: Path, more: str, words: str) -> None:

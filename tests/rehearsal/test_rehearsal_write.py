@@ -300,3 +300,29 @@ def test_fit_per_round_recovers_the_closed_form() -> None:
     assert abs(pulls.std() - 1) < 4 / np.sqrt(800)
     with pytest.raises(ValueError, match="two numbers of rounds"):
         fit_per_round(failures(eps, 5000, rng)[:2])
+
+
+def test_stopped_rehearsal_leaves_nothing_for_the_next(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A rehearsal stopped half-way is not up to date, and the next one clears its files."""
+
+    class Stopped(Exception):
+        pass
+
+    def stop(*_: Any) -> None:
+        raise Stopped
+
+    with monkeypatch.context() as patch:
+        patch.setattr("leakpipe.rehearsal.write._epoch_truth", stop)
+        with pytest.raises(Stopped):
+            rehearse(scenario(truth=NO_TRUTH), tmp_path)
+    assert len(memories(tmp_path)) == 3
+    assert not up_to_date(scenario(truth=NO_TRUTH), tmp_path)
+    rehearse(scenario(truth=NO_TRUTH, rounds=(2, 3)), tmp_path)
+    assert {path.name for path in tmp_path.iterdir()} == {
+        "cal-001-calibration.nc",
+        "cal-001-Z-R02.nc",
+        "cal-001-Z-R03.nc",
+        "truth.json",
+    }
