@@ -262,17 +262,29 @@ def share(rounds: Sequence[int], eps: float) -> xr.Dataset:
     """Invented routes of the share that agree within their errors."""
     counts = np.array(rounds)
     routes = {
-        "K": _around(0.121, 0.09, "leaked readings and closing readout"),
-        "J": Estimate.unknown("no injected runs"),
+        "readings": _around(0.121, 0.09, "leaked readings and closing readout"),
+        "injected": Estimate.unknown("no injected runs"),
         "twin": Estimate(0.128, 0.095, 0.16, 0.95, True, "rehearsal set to the fitted rates"),
     }
     without = eps * (1 - 0.121)
     return xr.Dataset(
         {
-            **store("leakage_share", (), Estimate(0.121, 0.092, 0.15, 0.95, True, "route K")),
-            **store("leakage_share_statistical", (), _around(0.121, 0.07, "route K")),
+            **store(
+                "leakage_share",
+                (),
+                Estimate(0.121, 0.092, 0.15, 0.95, True, "leaked readings and closing readout"),
+            ),
+            **store(
+                "leakage_share_statistical",
+                (),
+                _around(0.121, 0.07, "leaked readings and closing readout"),
+            ),
             **store("share_route", ("route",), list(routes.values())),
-            **store("per_round_without", (), _around(without, 0.02, "route K")),
+            **store(
+                "per_round_without",
+                (),
+                _around(without, 0.02, "leaked readings and closing readout"),
+            ),
             "fidelity_without": ("recording", 0.99 * (1 - 2 * without) ** counts),
         },
         coords={

@@ -58,7 +58,7 @@ def draw(patch: PatchReport, place: str) -> Drawing:
     ends = _curves(patch, axes, rounds[usable])
     hidden = int((np.isfinite(fidelity) & (fidelity <= 0) & (injected == 0)).sum())
     if usable.any():
-        _ticks(axes, fidelity[usable])
+        _ticks(axes, np.maximum(fidelity - 2 * HALF_WIDTH * error, 0.6 * fidelity)[usable])
     # Labels sit in log units, because that is how far apart they look.
     lowest, highest = (np.log(limit) for limit in axes.get_ylim())
     heights = spread_apart([np.log(height) for _, _, height in ends], 0.08 * (highest - lowest))
@@ -139,9 +139,9 @@ def _curves(patch: PatchReport, axes: Axes, rounds: Array) -> list[tuple[str, st
     return ends
 
 
-def _ticks(axes: Axes, fidelity: Array) -> None:
-    """Put plain numbers on the log axis."""
-    low = max(min(float(fidelity.min()) * 0.85, 0.9), 1e-3)
+def _ticks(axes: Axes, lowest: Array) -> None:
+    """Put plain numbers on the log axis, which reaches down to the ends of the bars."""
+    low = max(min(float(lowest.min()) * 0.92, 0.9), 1e-3)
     axes.set_ylim(low, 1.08)
     axes.yaxis.set_major_locator(FixedLocator([tick for tick in TICKS if low <= tick]))
     axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
