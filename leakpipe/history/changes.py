@@ -8,21 +8,19 @@ readout calibration, and is taken off the single qubits before they are judged.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
 
 from leakpipe.config.history import HistorySettings
 from leakpipe.findings import Finding, Severity
-from leakpipe.history import evidence
-from leakpipe.history.chart import Chart, Floats, chart
-from leakpipe.history.panel import Panel, epochs_of, floor_of, from_scale, interval, panel
+from leakpipe.history.alarms import alarms
+from leakpipe.history.judged import QUBIT_LEAKAGE, Judged, judge
+from leakpipe.history.panel import epochs_of, panel
 from leakpipe.history.rows import Row
-from leakpipe.history.thresholds import WORTH_RAISING, threshold_for
+from leakpipe.history.thresholds import WORTH_RAISING
 from leakpipe.history.words import amount, title
 
-QUBIT_LEAKAGE = "steady_leakage"
 OF_CODE = (
     ("data_steady_leakage", True),
     ("measure_steady_leakage", True),
@@ -32,19 +30,9 @@ OF_CODE = (
 )
 """Quantities of the whole code, and whether its bases measure the same thing."""
 
-FALSE_ALARMS = 0.7e-3
-"""False alarms per epoch, series and direction (rates study; `studies.season` measures it)."""
 JUMP_SIGMA = 4.0
 """Errors that a jump from one epoch to the next must exceed: by chance once in 16 000 epochs of a
 qubit, well below the chart's own false alarms (our choice)."""
-
-
-@dataclass(frozen=True)
-class _Judged:
-    """A panel with its chart."""
-
-    panel: Panel
-    chart: Chart
 
 
 def changes(
@@ -85,129 +73,25 @@ def _of_patch(
     settings: HistorySettings,
 ) -> list[Finding]:
     epochs = epochs_of(rows)
-    qubits = _judge(panel(rows, QUBIT_LEAKAGE, epochs, of_qubits=True, join_bases=True), None)
-    shift = np.where(qubits.chart.is_shared, qubits.chart.shared, 0.0)
+    qubits = judge(
+        panel(rows, QUBIT_LEAKAGE, epochs, of_qubits=True, join_bases=True), in_common=True
+    )
     codes = [
-        _judge(
+        judge(
             panel(rows, quantity, epochs, of_qubits=False, join_bases=joined),
-            shift if quantity.endswith(QUBIT_LEAKAGE) else None,
-            of_qubits=False,
+            shift=qubits.shift if quantity.endswith(QUBIT_LEAKAGE) else None,
         )
         for quantity, joined in OF_CODE
     ]
-    found: list[tuple[int, Finding]] = _shared_shifts(patch, qubits)
+    found = _shared_shifts(patch, qubits)
     for judged in (qubits, *codes):
-        found += _alarms(patch, judged, neighbours, settings)
-    found += _jumps(patch, qubits, settings)
+        found += alarms(patch, judged, qubits, neighbours, settings)
+    found += _jumps(qubits, settings)
     found += _correlated(patch, (qubits, *codes))
     return [finding for _, finding in sorted(found, key=lambda pair: pair[0])]
 
 
-def _judge(one: Panel, shift: Floats | None, *, of_qubits: bool = True) -> _Judged:
-    return _Judged(
-        one, chart(one.scaled, one.error, in_common=of_qubits, shift=shift, raised=threshold_for)
-    )
-
-
-def _alarms(
-    patch: str,
-    judged: _Judged,
-    neighbours: Mapping[str, Sequence[str]],
-    settings: HistorySettings,
-) -> list[tuple[int, Finding]]:
-    found = []
-    for now, column in zip(*np.nonzero(judged.chart.alarm), strict=True):
-        found.append((int(now), _alarm(patch, judged, now, column, neighbours, settings)))
-    return found
-
-
-def _alarm(
-    patch: str,
-    judged: _Judged,
-    now: int,
-    column: int,
-    neighbours: Mapping[str, Sequence[str]],
-    settings: HistorySettings,
-) -> Finding:
-    one, run = judged.panel, judged.chart
-    series, quantity = one.series[column], one.quantity
-    direction = int(run.alarm[now, column])
-    since = int(run.since[now, column])
-    # The baseline of the first epoch that deviated: later ones may have learned from the change.
-    before, before_error = run.baseline[since, column], run.baseline_error[since, column]
-    shift = np.where(run.is_shared, np.nan_to_num(run.shared), 0.0)
-    after, after_error, count = _level(one, run, shift, since, now, column)
-    error = float(np.hypot(before_error, after_error))
-    sigma = abs(after - before) / error
-    old = (float(from_scale(quantity, before)), *interval(quantity, before, before_error))
-    new = (float(from_scale(quantity, after)), *interval(quantity, after, after_error))
-    ratio = _ratio(quantity, after - before, error, old[0], new[0])
-    series_count = int(np.isfinite(one.scaled[now]).sum())
-    once_in = 1 / (FALSE_ALARMS * max(series_count, 1))
-    name = f"{series.qubit} {title(quantity)}" if series.qubit else title(quantity).capitalize()
-    sentence = (
-        f"{name} {'rose' if direction > 0 else 'fell'} from {amount(quantity, *old)} "
-        f"to {amount(quantity, *new)} since calibration {one.epochs[since]}, "
-        f"{sigma:.1f} standard errors over {count} epoch{'s' if count > 1 else ''}; "
-        f"by chance about once in {once_in:.0f} epochs"
-    )
-    numbers: dict[str, float | int | str | None] = {
-        "epoch": one.epochs[now],
-        "since": one.epochs[since],
-        "epochs_since": count,
-        "quantity": quantity,
-        "direction": direction,
-        **dict(zip(("from", "from_low", "from_high"), old, strict=True)),
-        **dict(zip(("to", "to_low", "to_high"), new, strict=True)),
-        **dict(zip(("ratio", "ratio_low", "ratio_high"), ratio, strict=True)),
-        "sigma": sigma,
-        "threshold": float(run.threshold[now]),
-    }
-    if series.qubit:
-        clue = evidence.around(series.qubit, neighbours, one, run, since, now)
-        sentence = f"{sentence}; {clue.words}"
-        numbers["neighbours_moved"] = ",".join(clue.moved)
-    where = series.qubit or f"{patch} {series.basis}"
-    severity = _severity(quantity, direction, ratio[0], settings)
-    return Finding(f"{_code(quantity)}-changed", severity, where, f"{sentence}.", numbers)
-
-
-def _level(
-    one: Panel, run: Chart, shift: Floats, since: int, now: int, column: int
-) -> tuple[float, float, int]:
-    """Return the level of a series over some epochs, its error and the number of values."""
-    values = one.scaled[since : now + 1, column] - shift[since : now + 1]
-    errors = one.error[since : now + 1, column]
-    good = np.isfinite(values) & np.isfinite(errors)
-    weights = 1.0 / (errors[good] ** 2 + run.between[now] ** 2)
-    middle = float((weights * values[good]).sum() / weights.sum())
-    return middle, float(weights.sum() ** -0.5), int(good.sum())
-
-
-def _ratio(
-    quantity: str, difference: float, error: float, old: float, new: float
-) -> tuple[float | None, float | None, float | None]:
-    if floor_of(quantity) is None:
-        return (new / old if old > 0 else None), None, None
-    low, high = (float(np.exp(difference + sign * 1.96 * error)) for sign in (-1, 1))
-    return float(np.exp(difference)), low, high
-
-
-def _severity(
-    quantity: str, direction: int, ratio: float | None, settings: HistorySettings
-) -> Severity:
-    if direction < 0:
-        return "note"
-    if quantity == "settling_rounds" or ratio is None or ratio < settings.act_ratio:
-        return "watch"
-    return "act"
-
-
-def _code(quantity: str) -> str:
-    return "leakage" if quantity.endswith(QUBIT_LEAKAGE) else title(quantity).replace(" ", "-")
-
-
-def _shared_shifts(patch: str, qubits: _Judged) -> list[tuple[int, Finding]]:
+def _shared_shifts(patch: str, qubits: Judged) -> list[tuple[int, Finding]]:
     """One finding when a shift in common begins, and one when the next epoch confirms it."""
     run, found = qubits.chart, []
     lasted = 0
@@ -220,12 +104,12 @@ def _shared_shifts(patch: str, qubits: _Judged) -> list[tuple[int, Finding]]:
     return found
 
 
-def _shared_shift(patch: str, qubits: _Judged, now: int, *, again: bool) -> Finding:
+def _shared_shift(patch: str, qubits: Judged, now: int, *, again: bool) -> Finding:
     one, run = qubits.panel, qubits.chart
     ratio, error = float(np.exp(run.shared[now])), float(run.shared_error[now])
     low, high = (ratio * float(np.exp(sign * 1.96 * error)) for sign in (-1, 1))
     count = int(np.isfinite(run.deviation[now]).sum())
-    moved = f"leakage of all {count} qubits moved together by a factor {ratio:.2f}"
+    moved = f"leakage of {count} qubits moved together by a factor {ratio:.2f}"
     interval_words = f"({low:.2f} to {high:.2f})"
     clue = (
         "for the second epoch: either both calibrations are off, or the whole chip changed"
@@ -249,11 +133,10 @@ def _shared_shift(patch: str, qubits: _Judged, now: int, *, again: bool) -> Find
     )
 
 
-def _jumps(patch: str, qubits: _Judged, settings: HistorySettings) -> list[tuple[int, Finding]]:
+def _jumps(qubits: Judged, settings: HistorySettings) -> list[tuple[int, Finding]]:
     """Qubits far from their last value before, beyond noise; works from the second epoch on."""
     one, run = qubits.panel, qubits.chart
-    shift = np.where(run.is_shared, np.nan_to_num(run.shared), 0.0)
-    values = one.scaled - shift[:, np.newaxis]
+    values = qubits.values
     found = []
     for column, series in enumerate(one.series):
         known = np.flatnonzero(np.isfinite(values[:, column]))
@@ -293,7 +176,7 @@ def _jumps(patch: str, qubits: _Judged, settings: HistorySettings) -> list[tuple
     return found
 
 
-def _correlated(patch: str, all_judged: Sequence[_Judged]) -> list[tuple[int, Finding]]:
+def _correlated(patch: str, all_judged: Sequence[Judged]) -> list[tuple[int, Finding]]:
     """One note at the newest epoch per quantity whose epochs hang together in time."""
     found = []
     for judged in all_judged:

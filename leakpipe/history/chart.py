@@ -226,11 +226,12 @@ def _shared(step: Floats, spread: Floats, known: NDArray[np.bool_]) -> tuple[flo
 
 
 def _correlation(values: Floats, errors: Floats, variance: float) -> tuple[float, float, bool]:
-    """Return the lag-one autocorrelation of the epochs, pooled over the series.
+    """Return the lag-one autocorrelation of the epochs over all series.
 
-    Residuals r from each series' mean, standardised with s^2 + between-epoch variance:
-    rho = (mean r_t r_{t+1} + var(r) / n) / var(r), where var(r) / n undoes what taking off the
-    mean of n epochs costs.
+    Per series, from residuals r about its mean in units of sqrt(s^2 + between-epoch variance):
+    sum r_t r_{t+1} / sum r_t^2 + 1/n, where 1/n undoes what taking off the mean of n epochs costs.
+    Over the series the mean of the middle half: a few that really changed are autocorrelated too,
+    and must not make the chart deaf to others.
 
     Returns
     -------
@@ -243,24 +244,24 @@ def _correlation(values: Floats, errors: Floats, variance: float) -> tuple[float
     """
     total = errors**2 + variance
     good = np.isfinite(values) & np.isfinite(total)
-    count = good.sum(axis=0)
-    use = count >= 2
-    good, count = good[:, use], count[use]
+    use = (good[1:] & good[:-1]).sum(axis=0) >= 2
+    good = good[:, use]
+    pairs = (good[1:] & good[:-1]).sum(axis=0)
+    if pairs.sum() < CORRELATION_PAIRS:
+        return np.nan, np.nan, False
     clean = np.where(good, values[:, use], 0.0)
     total = np.where(good, total[:, use], 1.0)
-    mean = clean.sum(axis=0) / count if use.any() else np.zeros(0)
-    scaled = np.where(good, (clean - mean) / np.sqrt(total), 0.0)
-    adjacent = good[1:] & good[:-1]
-    pairs = int(adjacent.sum())
-    if pairs < CORRELATION_PAIRS:
-        return np.nan, np.nan, False
-    square = float((scaled**2).sum() / (count - 1).sum())
-    product = float((scaled[1:] * scaled[:-1])[adjacent].sum() / pairs)
-    lost = float((adjacent / count).sum() / pairs)
-    rho = product / square + lost
+    count = good.sum(axis=0)
+    scaled = np.where(good, (clean - clean.sum(axis=0) / count) / np.sqrt(total), 0.0)
+    square = (scaled**2).sum(axis=0) / count
+    product = (scaled[1:] * scaled[:-1]).sum(axis=0) / pairs
+    with np.errstate(divide="ignore", invalid="ignore"):
+        single = np.where(square > 0, product / square, 0.0) + 1.0 / count
+    skipped = len(single) // 4
+    rho = float(np.sort(single)[skipped : len(single) - skipped].mean())
     between = variance / float(total[good].mean())
     phi = min(rho / between, 1.0) if between > 0 else np.nan
-    return rho, phi, bool(rho * np.sqrt(pairs) > CORRELATION_SIGMA)
+    return rho, phi, bool(rho * np.sqrt(pairs.sum()) > CORRELATION_SIGMA)
 
 
 def _empty(epochs: int, series: int) -> Chart:
