@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from leakpipe.readout.densities import STATES, TAILS, FloatArray
-from leakpipe.readout.mixture import Mixture, fit, start
+from leakpipe.readout.mixture import Mixture, compressed, fit, start
 from leakpipe.readout.population import (
     WORKING_PRIOR,
     Discriminant,
@@ -17,6 +17,8 @@ from leakpipe.readout.population import (
     response,
 )
 
+FINISH_STEPS = 8
+"""EM steps on the points after convergence on cells: they restore the spread within cells."""
 REPLICA_STEPS = 6
 """EM steps of a bootstrap refit that starts from the full fit."""
 FAR = 4.5
@@ -103,7 +105,12 @@ def model_qubit(
     points = [np.ascontiguousarray(x[np.isfinite(x).all(axis=1)], dtype=float) for x in points]
     missing = 1 - sum(len(x) for x in points) / total
     begin, reason = (start(points, prepared), "") if 2 in prepared else _without_leaked(points)
-    mixture = fit(points, begin, decay=decay)
+    cells, cell_counts = compressed(points, np.sqrt(np.diag(begin.covariance)))
+    coarse = fit(cells, begin, counts=cell_counts, decay=decay)
+    # The cells decide where EM converges; the points themselves finish it.
+    mixture = replace(
+        fit(points, coarse, decay=decay, steps=FINISH_STEPS), converged=coarse.converged
+    )
     if reason:
         mixture = _leaked_far_away(mixture)
     rule = discriminant(mixture.means, mixture.covariance, mixture.box_volume)
@@ -111,8 +118,9 @@ def model_qubit(
     table, labels = response(mixture, rule, where, area)
     copies = []
     for _ in range(replicas):
-        counts = [rng.poisson(1.0, len(x)).astype(float) for x in points]
-        copy = fit(points, mixture, counts=counts, decay=decay, steps=REPLICA_STEPS)
+        # A sum of n Poisson(1) weights is Poisson(n): the bootstrap of the points, cell by cell.
+        counts = [rng.poisson(count).astype(float) for count in cell_counts]
+        copy = fit(cells, coarse, counts=counts, decay=decay, steps=REPLICA_STEPS)
         if reason:
             copy = _leaked_far_away(copy)
         copies.append(response(copy, rule, where, area)[0])

@@ -192,3 +192,38 @@ def _step(
         decay=new_decay,
         likelihood=likelihood / totals.sum(),
     )
+
+
+CELL = 0.2
+"""Side of the cells, in tied standard deviations, whose points are pooled into their mean."""
+
+
+def compressed(
+    points: list[FloatArray], sigma: FloatArray
+) -> tuple[list[FloatArray], list[FloatArray]]:
+    """Pool close points into their mean and count, ten times fewer for EM to visit.
+
+    What is lost is the spread within a cell, CELL^2 / 12 = 0.3 % of the variance; a few steps on
+    the points themselves bring it back.
+
+    Parameters
+    ----------
+    points
+        Per preparation (shot, feature).
+    sigma
+        (feature,) standard deviations.
+
+    Returns
+    -------
+    means, counts
+        Per preparation (cell, feature) and (cell,).
+    """
+    means, counts = [], []
+    for x in points:
+        cells = np.floor(x / (CELL * sigma)).astype(np.int64)
+        _, home, count = np.unique(cells, axis=0, return_inverse=True, return_counts=True)
+        home = home.ravel()
+        sums = [np.bincount(home, x[:, a], minlength=len(count)) for a in range(x.shape[1])]
+        means.append(np.ascontiguousarray(np.stack(sums, axis=1) / count[:, None]))
+        counts.append(count.astype(float))
+    return means, counts
