@@ -216,7 +216,7 @@ def _role_measure(readout: xr.Dataset, settings: RatesSettings, rng: np.random.G
     usable, reasons = _usable(readout, names)
     plain = readout["injected"].values == 0
     leaked = readout["leaked"].values[plain]
-    error = readout["leaked_shot_error"].values[plain]
+    error = _even_error(readout["leaked_shot_error"].values[plain], readout["shots"].values[plain])
     batches = readout["leaked_batch"].values[plain]
     replicas = readout["leaked_replica"].values[:, plain]
     if not usable.any() or not plain.any():
@@ -258,7 +258,8 @@ def _role_data(
     usable, reasons = _usable(readout, names)
     plain = np.flatnonzero(readout["injected"].values == 0)
     value = readout["closing_leaked"].values[plain]
-    error = readout["closing_leaked_shot_error"].values[plain]
+    shots = readout["shots"].values[plain]
+    error = _even_error(readout["closing_leaked_shot_error"].values[plain], shots)
     if not usable.any() or not len(plain):
         return _no_role(names, reasons, settings)
     rows, columns = np.nonzero(np.isfinite(value) & (error > 0) & usable)
@@ -288,6 +289,18 @@ def _role_data(
         reason = "one number of rounds and no correlations: settling and steady level not separable"
         return _no_role(names, [reason] * len(names), settings)
     return _fitted(series, names, usable, reasons, basis, prior, settings, rng, free_start=True)
+
+
+def _even_error(error: FloatArray, shots: NDArray[np.int64]) -> FloatArray:
+    """Return shot errors from one variance per shot and qubit, over (recording, ..., qubit).
+
+    With few leaked readings an observation's own variance grows with its value, so that weights
+    from it favour what fluctuated low: 20 % too low for 4000 shots at a population of 0.14 %.
+    """
+    over = tuple(range(error.ndim - 1))
+    number = np.broadcast_to(shots.reshape(-1, *(1,) * (error.ndim - 1)), error.shape)
+    per_shot = np.nanmean(np.where(error > 0, error**2 * number, np.nan), axis=over)
+    return np.where(np.isfinite(error), np.sqrt(per_shot / number), np.nan)
 
 
 def _mixing(memory: float, measure: _Role, closing: FloatArray) -> float:
