@@ -121,9 +121,9 @@ def check(
 ) -> int:
     """Check the config and the recordings; say what would run. Nothing is written."""
     loaded = _load(config, recordings, out, settings)
-    from leakpipe.pipeline import preview
+    from leakpipe.preview import preview
 
-    plan = preview(loaded, reporter_for(quiet=quiet))
+    plan = preview(loaded)
     click.echo(json.dumps(plan.to_json(), indent=1) if as_json else plan.text())
     return 0
 
@@ -144,4 +144,101 @@ def rehearse(scenario: Path, out: Path, keep: bool, quiet: bool) -> int:
         click.echo(f"{out} already holds this scenario", err=True)
         return 0
     make(loaded, out, reporter_for(quiet=quiet))
+    return 0
+
+
+@commands.command()
+@_config_options
+@click.option("--every", metavar="TIME", help="Keep running, a pass every TIME, such as 15m.")
+@click.option("--rebuild", is_flag=True, help="First rebuild the history from the result folders.")
+def refit(
+    config: Path,
+    recordings: Path | None,
+    out: Path | None,
+    settings: tuple[str, ...],
+    quiet: bool,
+    as_json: bool,
+    every: str | None,
+    rebuild: bool,
+) -> int:
+    """Make every result that is new or stale. Safe from a timer, twice at once, after a kill."""
+    loaded = _load(config, recordings, out, settings)
+    from leakpipe.history.duration import seconds
+    from leakpipe.refit import refit as one_pass
+    from leakpipe.refit import repeat, stop_on_signals
+
+    if rebuild:
+        from leakpipe.history.publish import store_of
+
+        for problem in store_of(loaded.results).rebuild(loaded.results):
+            click.echo(problem, err=True)
+    reporter = reporter_for(quiet=quiet)
+    tools = _refit_tools()
+    with stop_on_signals() as stop:
+        if every is not None:
+            repeat(
+                lambda: one_pass(loaded, tools, reporter, stop=stop),
+                seconds(every),
+                stop,
+                lambda text: click.echo(text, err=True),
+            )
+            return 0
+        done = one_pass(loaded, tools, reporter, stop=stop)
+    click.echo(json.dumps(done.to_json(), indent=1) if as_json else done.text())
+    return EXIT_INTERRUPTED if done.stopped else done.exit_code
+
+
+def _refit_tools() -> Any:
+    """Return tools that import the pipeline only when there is something to run."""
+    from leakpipe.history.jobs import Tools
+    from leakpipe.history.planning import plan_recordings
+
+    def run_job(*arguments: Any) -> None:
+        from leakpipe.pipeline import run_job as run_one
+
+        run_one(*arguments)
+
+    def closing(loaded: Config) -> None:
+        from leakpipe.pipeline import close_pass
+
+        close_pass(loaded)
+
+    return Tools(plan=plan_recordings, run=run_job, closing=closing)
+
+
+@commands.command()
+@_config_options
+@click.option("--quantity", help="Only this quantity, such as steady_leakage, for every qubit.")
+@click.option("--qubit", help="Only this qubit, epoch by epoch.")
+@click.option("--epochs", "list_epochs", is_flag=True, help="List the epochs.")
+def log(
+    config: Path,
+    recordings: Path | None,
+    out: Path | None,
+    settings: tuple[str, ...],
+    quiet: bool,
+    as_json: bool,
+    quantity: str | None,
+    qubit: str | None,
+    list_epochs: bool,
+) -> int:
+    """Show the history: what is known, how it moved, what changed."""
+    loaded = _load(config, recordings, out, settings)
+    from leakpipe.history import terminal
+    from leakpipe.history.changes import changes
+    from leakpipe.history.publish import store_of
+
+    store = store_of(loaded.results)
+    rows = store.rows()
+    flags = [one.to_json() for one in changes(rows, {}, loaded.history)]
+    if as_json:
+        click.echo(json.dumps(terminal.log_json(store.epochs(), rows, flags), indent=1))
+    elif list_epochs:
+        click.echo(terminal.epochs_text(store.epochs()))
+    elif qubit is not None:
+        click.echo(terminal.qubit_text(rows, qubit, quantity or "steady_leakage"))
+    elif quantity is not None:
+        click.echo(terminal.quantity_text(rows, quantity))
+    else:
+        click.echo(terminal.overview_text(rows, flags))
     return 0

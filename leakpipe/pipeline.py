@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import importlib.metadata
+import json
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from itertools import groupby
 from pathlib import Path
@@ -16,11 +17,15 @@ import yaml
 from leakpipe import __version__
 from leakpipe.detection.stage import detection
 from leakpipe.findings import Finding
+from leakpipe.history.compare import limits_of, neighbours_of, since_last, write_epochs_page
+from leakpipe.history.files import append_once
+from leakpipe.history.jobs import Job
+from leakpipe.history.publish import store_of
 from leakpipe.logical.stage import logical
 from leakpipe.progress import Reporter, Silent
 from leakpipe.rates.stage import rates
 from leakpipe.readout.stage import calibrate, readout
-from leakpipe.recordings.finding import Epoch, find, usable
+from leakpipe.recordings.finding import Epoch, find, layout_of, usable
 from leakpipe.recordings.opening import MemoryRecording, content_hash, open_calibration
 from leakpipe.reduction import Reduced, reduce_all
 from leakpipe.report.figures import write_figures
@@ -28,7 +33,7 @@ from leakpipe.report.inputs import PatchReport
 from leakpipe.report.page import page
 from leakpipe.report.run_log import json_line, run_log_block
 from leakpipe.report.summary import summary
-from leakpipe.result import PatchResult, append_line, folder_name, replacing, write_numbers
+from leakpipe.result import PatchResult, folder_name, replacing, write_numbers
 from leakpipe.share.stage import share
 
 if TYPE_CHECKING:
@@ -110,20 +115,22 @@ def run_all(config: Config, reporter: Reporter | None = None) -> list[PatchResul
     results = []
     for epoch in epochs:
         for patch in sorted({one.patch for one in epoch.memories}):
-            results.append(run_patch(epoch, patch, config, reporter))
+            reports = run_patch(epoch, patch, config, reporter)
+            place = config.results / folder_name(epoch.calibration_id, patch)
+            with reporter.step(f"{epoch.calibration_id} {patch}: writing report"):
+                with replacing(place) as folder:
+                    content, block = write_result(folder, reports, config)
+                if config.run_log is not None:
+                    append_once(config.run_log, json_line(content))
+            acts = any(finding["severity"] == "act" for finding in content["findings"])
+            results.append(PatchResult(place, content, block, acts))
     return results
 
 
 def run_patch(
-    epoch: Epoch,
-    patch: str,
-    config: Config,
-    reporter: Reporter | None = None,
-    *,
-    place: Path | None = None,
-    changes: Sequence[Finding] = (),
-) -> PatchResult:
-    """Run all stages on one patch of one epoch and write its result folder.
+    epoch: Epoch, patch: str, config: Config, reporter: Reporter | None = None
+) -> list[PatchReport]:
+    """Run all stages on one patch of one epoch.
 
     Parameters
     ----------
@@ -135,10 +142,11 @@ def run_patch(
         Settings.
     reporter
         Told about every step.
-    place
-        Result folder; by default one of the config's folder of results.
-    changes
-        Findings about what moved since earlier epochs.
+
+    Returns
+    -------
+    reports
+        One per basis of the patch.
 
     Raises
     ------
@@ -161,8 +169,7 @@ def run_patch(
             with reporter.step(f"{label} {basis}: {name}"):
                 done[name] = stage(Material(model, reduced, config, done))
         reports.append(_report(epoch, recordings, done, model, calibrations[-1], config))
-    with reporter.step(f"{label}: writing report"):
-        return _write(reports, config, place, changes)
+    return reports
 
 
 def _report(
@@ -214,27 +221,60 @@ def _cloud(calibration: xr.Dataset) -> xr.Dataset | None:
     return sample.rename(shot="point")
 
 
-def _write(
+def write_result(
+    folder: Path,
     reports: Sequence[PatchReport],
     config: Config,
-    place: Path | None,
-    changes: Sequence[Finding],
-) -> PatchResult:
-    first = reports[0]
-    content = summary(reports, changes)
-    block = run_log_block(content)
-    place = place or config.results / folder_name(first.calibration_id, first.patch)
+    changes: Sequence[Finding] | None = None,
+) -> tuple[dict[str, Any], str]:
+    """Fill an empty folder with everything about one patch of one epoch.
+
+    Parameters
+    ----------
+    folder
+        Exists and is empty.
+    reports
+        One per basis.
+    config
+        Its limits may add findings.
+    changes
+        What moved since earlier epochs; None without an earlier one.
+
+    Returns
+    -------
+    summary, block
+        Content of `summary.json` and `summary.md`.
+    """
+    limits = limits_of(summary(reports), config.history)
+    reports = [replace(reports[0], findings=(*reports[0].findings, *limits)), *reports[1:]]
+    content = summary(reports, changes or ())
+    block = run_log_block(content, changes)
     groups = {f"{one.basis}/{name}": data for one in reports for name, data in one.stages.items()}
-    with replacing(place) as folder:
-        write_numbers(folder / "leakage.nc", groups, _provenance(reports))
-        figures = [file for one in reports for file in write_figures(one, folder / "figures")]
-        (folder / "summary.json").write_text(_json(content), encoding="utf-8")
-        (folder / "summary.md").write_text(block + "\n", encoding="utf-8")
-        (folder / "page.html").write_text(page(content, reports, figures), encoding="utf-8")
-    if config.run_log is not None:
-        append_line(config.run_log, json_line(content))
-    acts = any(finding["severity"] == "act" for finding in content["findings"])
-    return PatchResult(place, content, block, acts)
+    write_numbers(folder / "leakage.nc", groups, _provenance(reports))
+    figures = [file for one in reports for file in write_figures(one, folder / "figures")]
+    (folder / "summary.json").write_text(_json(content), encoding="utf-8")
+    (folder / "summary.md").write_text(block + "\n", encoding="utf-8")
+    html = page(content, reports, figures, changes)
+    (folder / "page.html").write_text(html, encoding="utf-8")
+    return content, block
+
+
+def close_pass(config: Config) -> None:
+    """End a pass of refits: write the page over all epochs."""
+    neighbours = neighbours_of(layout_of(config))
+    write_epochs_page(config.results, store_of(config.results), neighbours, config.history)
+
+
+def run_job(
+    job: Job, folder: Path, config: Config, findings: Sequence[Finding], reporter: Reporter
+) -> None:
+    """Make one result of a refit: fill its empty folder, with what moved since earlier epochs."""
+    epoch, patch = job.payload, job.key[2]
+    reports = run_patch(epoch, patch, config, reporter)
+    reports[0] = replace(reports[0], findings=(*reports[0].findings, *findings))
+    neighbours = neighbours_of(reports[0].layout)
+    changes = since_last(store_of(config.results), summary(reports), neighbours, config.history)
+    write_result(folder, reports, config, changes)
 
 
 def _provenance(reports: Sequence[PatchReport]) -> dict[str, str]:
@@ -254,6 +294,4 @@ def _provenance(reports: Sequence[PatchReport]) -> dict[str, str]:
 
 
 def _json(value: Any) -> str:
-    import json
-
     return json.dumps(value, indent=1, ensure_ascii=False, allow_nan=False)

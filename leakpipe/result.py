@@ -7,15 +7,13 @@ import os
 import re
 import shutil
 import uuid
-from collections.abc import Hashable, Iterator, Mapping, Sequence
+from collections.abc import Hashable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import xarray as xr
-
-from leakpipe.findings import Finding
 
 
 @dataclass(frozen=True)
@@ -123,19 +121,3 @@ def _plain(attributes: Mapping[Hashable, Any]) -> dict[Hashable, str | int | flo
         for key, value in attributes.items()
         if value is not None and not isinstance(value, bool)
     }
-
-
-def append_line(path: Path, line: str) -> None:
-    """Append one line to a log in a single write, so that two writers cannot interleave."""
-    path.parent.mkdir(parents=True, exist_ok=True)
-    handle = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_APPEND, 0o644)
-    try:
-        os.write(handle, line.rstrip("\n").encode() + b"\n")
-        os.fsync(handle)
-    finally:
-        os.close(handle)
-
-
-def flagged(findings: Sequence[Finding]) -> bool:
-    """Return whether any finding asks to act."""
-    return any(finding.severity == "act" for finding in findings)

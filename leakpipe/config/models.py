@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -82,7 +83,7 @@ class Config(Section):
         """Return the config with every relative path made absolute from `folder`."""
 
         def absolute(path: Path | None) -> Path | None:
-            return None if path is None else folder / path.expanduser()
+            return None if path is None else Path(os.path.normpath(folder / path.expanduser()))
 
         return self.model_copy(
             update={

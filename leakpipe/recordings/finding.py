@@ -98,7 +98,7 @@ def find_among(config: Config, paths: Sequence[Path]) -> Found:
         There is no recording at all.
     """
     folder = config.recordings.folder
-    layout = layout_for(config.code, _layout_file(folder))
+    layout = layout_of(config)
     calibrations, memories, problems = _sort(paths, layout)
     if config.device is not None:
         calibrations = [one for one in calibrations if one.device == config.device]
@@ -137,6 +137,17 @@ def recording_paths(config: Config) -> list[Path]:
     folder = config.recordings.folder
     paths = {path for pattern in config.recordings.patterns for path in folder.rglob(pattern)}
     return sorted(path for path in paths if not path.name.startswith("."))
+
+
+def layout_of(config: Config) -> Layout:
+    """Return the layout that a config names, or the one found beside its recordings.
+
+    Raises
+    ------
+    ConfigError, LayoutError
+        The layout is not given or cannot be used.
+    """
+    return layout_for(config.code, _layout_file(config.recordings.folder))
 
 
 def _layout_file(folder: Path) -> Path | None:
