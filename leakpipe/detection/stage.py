@@ -11,16 +11,15 @@ from numpy.typing import NDArray
 
 from leakpipe.codes.events import MISSING, bits_of, defined_layers, detection_events
 from leakpipe.config.detection import DetectionSettings
+from leakpipe.detection.doubts import findings_of_counts
 from leakpipe.detection.sums import LAGS, DetectionSums, count, merge
-from leakpipe.findings import Finding, with_findings
+from leakpipe.findings import with_findings
 from leakpipe.recordings.shots import BATCHES, BLOCK, Frame, Readings
 
 __all__ = ["DetectionSums", "detection", "events_of", "merge", "partial"]
 
-MISSING_WATCH = 1e-3
-"""Fraction of missing readings that becomes a finding (common practice, no source)."""
-USELESS = 0.5
-"""A check that fires in half of its rounds carries no information."""
+LEAKED = 2
+"""State code of a leaked reading (docs/conventions.md)."""
 
 
 def events_of(readings: Readings, frame: Frame) -> tuple[NDArray[np.uint8], NDArray[np.bool_]]:
@@ -42,50 +41,40 @@ def events_of(readings: Readings, frame: Frame) -> tuple[NDArray[np.uint8], NDAr
     lost_final = readings.final_states == MISSING
     if lost.any() or lost_final.any():
         valid = valid.copy()
-        reach = 1 if frame.reset else 2
-        for later in range(reach + 1):
-            stop = frame.rounds + 1 - later
-            valid[:, later:] &= ~lost[:, :stop] if stop > 0 else True
-        closing = (lost_final[:, None, :] & frame.layout.adjacency).any(axis=2)
-        valid[:, frame.rounds] &= ~closing
+        # With reset an event compares readings r and r - 1; without, the change of the XOR of
+        # successive readings, in which r - 1 cancels, compares r and r - 2.
+        back = 1 if frame.reset else 2
+        valid[:, : frame.rounds] &= ~lost
+        valid[:, back : frame.rounds] &= ~lost[:, : max(frame.rounds - back, 0)]
+        valid[:, frame.rounds] &= ~lost[:, max(frame.rounds - back, 0) :].any(axis=1)
+        for check, qubits in enumerate(frame.layout.touches):
+            valid[:, frame.rounds, check] &= ~lost_final[:, list(qubits)].any(axis=1)
     return events, valid
 
 
 def partial(readings: Readings, frame: Frame) -> DetectionSums:
-    """Count the detection events and leaked labels of some shots."""
+    """Count the detection events and leaked labels of some consecutive shots.
+
+    Raises
+    ------
+    ValueError
+        The first shot does not start a block, so that local means would straddle chunks.
+    """
+    if readings.first % BLOCK:
+        raise ValueError(
+            f"the first shot must be a multiple of {BLOCK}, got {readings.first} instead"
+        )
     events, valid = events_of(readings, frame)
-    batch = frame.batch_of(readings.first, readings.shots)
-    pairs = np.array(frame.layout.sharing_pairs, dtype=np.int64)
-    event_sums, trials, products, block_products, blocks, block_shots = count(
-        events, valid, pairs, batch, readings.first, frame.shots
-    )
-    leaked = readings.states == 2
-    closing = readings.final_states == 2
-    leaked_sums = np.zeros((BATCHES, *leaked.shape[1:]), dtype=np.int64)
-    closing_sums = np.zeros((BATCHES, closing.shape[1]), dtype=np.int64)
-    for home in np.unique(batch):
-        leaked_sums[home] = leaked[batch == home].sum(axis=0)
-        closing_sums[home] = closing[batch == home].sum(axis=0)
-    after = np.zeros((LAGS, leaked.shape[2], closing.shape[1]), dtype=np.int64)
-    before = np.zeros((LAGS, leaked.shape[2]), dtype=np.int64)
-    for lag in range(min(LAGS, frame.rounds)):
-        then = leaked[:, frame.rounds - 1 - lag]
-        after[lag] = then.T.astype(np.int64) @ closing.astype(np.int64)
-        before[lag] = then.sum(axis=0)
-    lost = int((readings.states == MISSING).sum() + (readings.final_states == MISSING).sum())
-    return DetectionSums(
-        events=event_sums,
-        trials=trials,
-        products=products,
-        block_products=block_products,
-        blocks=blocks,
-        block_shots=block_shots,
-        leaked=leaked_sums,
-        closing_leaked=closing_sums,
-        after_leaked=after,
-        leaked_before=before,
-        shots=np.bincount(batch, minlength=BATCHES).astype(np.int64),
-        missing=np.array(lost, dtype=np.int64),
+    lost = int(np.count_nonzero(readings.states == MISSING))
+    lost += int(np.count_nonzero(readings.final_states == MISSING))
+    return count(
+        events,
+        valid,
+        readings.states == LEAKED,
+        readings.final_states == LEAKED,
+        np.array(frame.layout.sharing_pairs, dtype=np.int64).reshape(-1, 2),
+        frame.batch_of(readings.first, readings.shots),
+        lost,
     )
 
 
@@ -173,53 +162,4 @@ def detection(
         },
         attrs={"block": BLOCK},
     )
-    return with_findings(out, _findings(frames, lost, events, trials))
-
-
-def _findings(
-    frames: Sequence[Frame],
-    lost: Sequence[int],
-    events: NDArray[np.int64],
-    trials: NDArray[np.int64],
-) -> list[Finding]:
-    findings = []
-    for frame, count_lost in zip(frames, lost, strict=True):
-        readings = frame.shots * (frame.rounds * len(frame.layout.measure) + len(frame.layout.data))
-        fraction = count_lost / readings
-        if fraction > MISSING_WATCH:
-            findings.append(
-                Finding(
-                    "missing-readings",
-                    "watch",
-                    frame.name,
-                    f"{frame.name}: {fraction:.2%} of the readings are missing; detection events "
-                    "with a missing reading are left out, correlations count them as no event.",
-                    {"fraction": fraction},
-                )
-            )
-        if frame.shots < BATCHES * BLOCK:
-            findings.append(
-                Finding(
-                    "few-shots",
-                    "watch",
-                    frame.name,
-                    f"{frame.name}: {frame.shots} shots are fewer than {BATCHES} batches of "
-                    f"{BLOCK}; its intervals rest on fewer batches.",
-                    {"shots": frame.shots},
-                )
-            )
-    total = trials.sum(axis=(0, 1, 2))
-    probability = events.sum(axis=(0, 1, 2)) / np.maximum(total, 1)
-    for name, value in zip(frames[0].layout.measure, probability, strict=True):
-        if value > USELESS:
-            findings.append(
-                Finding(
-                    "check-fires-always",
-                    "act",
-                    name,
-                    f"Check {name} fires in {value:.0%} of its rounds: is its readout or its "
-                    "place in the layout right?",
-                    {"detection_probability": float(value)},
-                )
-            )
-    return findings
+    return with_findings(out, findings_of_counts(frames, lost, events, trials))

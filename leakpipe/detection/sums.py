@@ -1,13 +1,15 @@
 """Sums over shots of detection events: counts, lag products, block products, leaked readings.
 
-One pass, integers only. The rounds of a check are packed into 64-bit words, so that products of
-rare events cost a few operations each. `count_numpy` is the clear twin of the compiled kernel; a
-property test holds them equal.
+One pass, integers only. The 50 shots of a block are the bits of one 64-bit word, so a product of
+two events costs one AND and one bit count for 50 shots, and the counts that block products are
+made of come with it. `count_numpy` is the clear twin of the compiled form; a property test holds
+them equal, field by field.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numba import njit
@@ -19,6 +21,8 @@ LAGS = 9
 """Lags 0..8 between the two events of a product."""
 
 IntArray = NDArray[np.int64]
+SmallIntArray = NDArray[np.int32]
+BitArray = NDArray[np.uint8] | NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -28,12 +32,15 @@ class DetectionSums:
     Attributes
     ----------
     events, trials
-        (batch, layer, check): detection events, and shots in which the event is defined.
+        (batch, layer, check) int64: detection events, and shots in which the event is defined and
+        every reading that enters it was recorded.
     products
-        (batch, pair, round, lag): shots in which the pair's early check has an event at `round`
-        and the late one at `round + lag`; interior layers 2..R only, others stay 0.
+        (batch, pair, interior, lag) int32: shots in which the pair's early check has an event at
+        interior layer 2 + i and the late one `lag` layers after; both layers interior (2..R),
+        other entries stay 0. An event that is not valid counts as no event.
     block_products
-        Same dims: sum over complete blocks of 50 shots of the product of the two checks' counts.
+        Same shape: sum over complete blocks of 50 shots of the product of the two event counts,
+        so that (products - block_products / 50) / (49 blocks) is the covariance about local means.
     blocks
         (batch,) number of complete blocks.
     block_shots
@@ -44,19 +51,19 @@ class DetectionSums:
         (batch, data) closing readings labelled leaked.
     after_leaked
         (lag, measure, data): shots with a leaked label of the measure qubit `lag` rounds before
-        the end and a leaked closing label of the data qubit, lags 0..8 (0: the last round).
+        the last round and a leaked closing label of the data qubit, lags 0..8.
     leaked_before
         (lag, measure): shots with such a leaked label.
     shots
         (batch,) shots.
     missing
-        Number of missing readings, rounds and closing.
+        Number of missing readings, rounds and closing, shape ().
     """
 
     events: IntArray
     trials: IntArray
-    products: IntArray
-    block_products: IntArray
+    products: SmallIntArray
+    block_products: SmallIntArray
     blocks: IntArray
     block_shots: IntArray
     leaked: IntArray
@@ -77,131 +84,179 @@ def merge(a: DetectionSums, b: DetectionSums) -> DetectionSums:
 def count(
     events: NDArray[np.uint8],
     valid: NDArray[np.bool_],
+    leaked: NDArray[np.bool_],
+    closing_leaked: NDArray[np.bool_],
     pairs: IntArray,
     batch: IntArray,
-    first: int,
-    shots_in_recording: int,
-) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray, IntArray]:
-    """Count events and their products.
+    missing: int = 0,
+) -> DetectionSums:
+    """Count events, their products and leaked labels of some shots.
 
     Parameters
     ----------
     events
-        (shot, layer, check) 0 or 1; undefined layers hold 0.
+        (shot, layer, check) 0 or 1, layers 1..R + 1. The first shot starts a block of 50.
     valid
-        Same shape: whether the event is defined and both its readings are there.
+        Same shape: whether the event is defined and all its readings are there.
+    leaked
+        (shot, round, measure) labels.
+    closing_leaked
+        (shot, data) labels.
     pairs
         (pair, 2) early and late check.
     batch
-        (shot,) batch of each shot.
-    first
-        Index of the first shot, a multiple of BLOCK.
-    shots_in_recording
-        Tells whether the last block is complete.
-
-    Returns
-    -------
-    events, trials, products, block_products, blocks, block_shots
-        As in `DetectionSums`.
+        (shot,) batch of each shot; the shots of one block share theirs.
+    missing
+        Number of missing readings, carried along.
     """
     shots, layers, checks = events.shape
-    event_sums = np.zeros((BATCHES, layers, checks), dtype=np.int64)
-    trials = np.zeros_like(event_sums)
-    interior = max(layers - 2, 0)
-    products = np.zeros((BATCHES, len(pairs), interior, LAGS), dtype=np.int64)
-    block_products = np.zeros_like(products)
-    _count_layers(events, valid, batch, event_sums, trials)
-    clean = np.where(valid, events, np.uint8(0))[:, 1 : layers - 1]
-    _count_products(np.ascontiguousarray(clean), pairs, batch, products)
-    complete = min(shots, shots_in_recording - first) // BLOCK
-    _count_blocks(np.ascontiguousarray(clean), pairs, batch, complete, block_products)
-    blocks = np.bincount(batch[: complete * BLOCK : BLOCK], minlength=BATCHES).astype(np.int64)
-    return event_sums, trials, products, block_products, blocks, blocks * BLOCK
+    sums = _nothing(leaked.shape[1], checks, closing_leaked.shape[1], len(pairs), missing)
+    full, home = shots // BLOCK, batch[::BLOCK]
+    sums["shots"] += np.bincount(batch, minlength=BATCHES)
+    sums["blocks"] += np.bincount(home[:full], minlength=BATCHES)
+    sums["block_shots"] += sums["blocks"] * BLOCK
+    valid_words = _packed(valid).reshape(-1, layers, checks)
+    event_words = _packed(events).reshape(-1, layers, checks) & valid_words
+    leaked_words = _packed(leaked).reshape(-1, *leaked.shape[1:])
+    closing_words = _packed(closing_leaked)
+    for words, target in (
+        (event_words, sums["events"]),
+        (valid_words, sums["trials"]),
+        (leaked_words, sums["leaked"]),
+        (closing_words, sums["closing_leaked"]),
+    ):
+        _count_words(words.reshape(len(home), -1), home, target.reshape(BATCHES, -1))
+    by_check = np.ascontiguousarray(event_words[:, 1 : layers - 1].transpose(0, 2, 1))
+    _count_products(by_check, pairs, home, full, sums["products"], sums["block_products"])
+    _count_after(leaked_words, closing_words, sums["after_leaked"], sums["leaked_before"])
+    return DetectionSums(**sums)
+
+
+def _nothing(rounds: int, checks: int, data: int, pairs: int, missing: int) -> dict[str, Any]:
+    """Return the sums of no shots, by field."""
+    interior = max(rounds - 1, 0)
+    return {
+        "events": np.zeros((BATCHES, rounds + 1, checks), dtype=np.int64),
+        "trials": np.zeros((BATCHES, rounds + 1, checks), dtype=np.int64),
+        "products": np.zeros((BATCHES, pairs, interior, LAGS), dtype=np.int32),
+        "block_products": np.zeros((BATCHES, pairs, interior, LAGS), dtype=np.int32),
+        "blocks": np.zeros(BATCHES, dtype=np.int64),
+        "block_shots": np.zeros(BATCHES, dtype=np.int64),
+        "leaked": np.zeros((BATCHES, rounds, checks), dtype=np.int64),
+        "closing_leaked": np.zeros((BATCHES, data), dtype=np.int64),
+        "after_leaked": np.zeros((LAGS, checks, data), dtype=np.int64),
+        "leaked_before": np.zeros((LAGS, checks), dtype=np.int64),
+        "shots": np.zeros(BATCHES, dtype=np.int64),
+        "missing": np.array(missing, dtype=np.int64),
+    }
+
+
+def _packed(bits: BitArray) -> NDArray[np.uint64]:
+    """Pack (shot, ...) bits into one word per block of 50 shots: (block, product of the rest)."""
+    shots = len(bits)
+    flat = np.ascontiguousarray(bits).view(np.uint8).reshape(shots, -1)
+    words = np.zeros((-(-shots // BLOCK), flat.shape[1]), dtype=np.uint64)
+    _pack(flat, words)
+    return words
 
 
 @njit(cache=True, nogil=True)
-def _count_layers(events, valid, batch, event_sums, trials):  # type: ignore[no-untyped-def]
-    for i in range(events.shape[0]):
-        home = batch[i]
-        for r in range(events.shape[1]):
-            for c in range(events.shape[2]):
-                if valid[i, r, c]:
-                    trials[home, r, c] += 1
-                    event_sums[home, r, c] += events[i, r, c]
+def _pack(flat, words):  # type: ignore[no-untyped-def]
+    for i in range(flat.shape[0]):
+        block, place = i // BLOCK, np.uint64(i % BLOCK)
+        for k in range(flat.shape[1]):
+            words[block, k] |= np.uint64(flat[i, k]) << place
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _ones(word):  # type: ignore[no-untyped-def]
+    """Number of set bits, by adding neighbouring fields of growing width."""
+    word = word - ((word >> np.uint64(1)) & np.uint64(0x5555555555555555))
+    word = (word & np.uint64(0x3333333333333333)) + (
+        (word >> np.uint64(2)) & np.uint64(0x3333333333333333)
+    )
+    word = (word + (word >> np.uint64(4))) & np.uint64(0x0F0F0F0F0F0F0F0F)
+    return (word * np.uint64(0x0101010101010101)) >> np.uint64(56)
 
 
 @njit(cache=True, nogil=True)
-def _count_products(events, pairs, batch, products):  # type: ignore[no-untyped-def]
-    """Add products of events; `events` holds interior layers only."""
-    shots, rounds, checks = events.shape
-    fired = np.zeros((checks, rounds + LAGS), dtype=np.uint8)
-    when = np.zeros((checks, rounds), dtype=np.int64)
-    number = np.zeros(checks, dtype=np.int64)
-    for i in range(shots):
-        home = batch[i]
-        number[:] = 0
-        for r in range(rounds):
-            for c in range(checks):
-                hit = events[i, r, c]
-                fired[c, r] = hit
-                if hit:
-                    when[c, number[c]] = r
-                    number[c] += 1
+def _count_words(words, home, target):  # type: ignore[no-untyped-def]
+    for b in range(words.shape[0]):
+        row = target[home[b]]
+        for k in range(words.shape[1]):
+            row[k] += np.int64(_ones(words[b, k]))
+
+
+@njit(cache=True, nogil=True)
+def _count_products(words, pairs, home, full, products, block_products):  # type: ignore[no-untyped-def]
+    """Add the products of every pair; `words` is (block, check, interior layer)."""
+    blocks, checks, rounds = words.shape
+    totals = np.zeros((checks, rounds), dtype=np.int32)
+    for b in range(blocks):
+        for c in range(checks):
+            for r in range(rounds):
+                totals[c, r] = np.int32(_ones(words[b, c, r]))
         for p in range(pairs.shape[0]):
             early, late = pairs[p, 0], pairs[p, 1]
-            if number[late] == 0:
-                continue
-            for k in range(number[early]):
-                r = when[early, k]
-                for lag in range(LAGS):
-                    products[home, p, r, lag] += fired[late, r + lag]
+            for r in range(rounds):
+                word = words[b, early, r]
+                if word == 0:
+                    continue
+                total = totals[early, r] if b < full else np.int32(0)
+                for lag in range(min(LAGS, rounds - r)):
+                    both = np.int32(_ones(word & words[b, late, r + lag]))
+                    products[home[b], p, r, lag] += both
+                    block_products[home[b], p, r, lag] += total * totals[late, r + lag]
 
 
 @njit(cache=True, nogil=True)
-def _count_blocks(events, pairs, batch, complete, block_products):  # type: ignore[no-untyped-def]
-    rounds, checks = events.shape[1], events.shape[2]
-    totals = np.zeros((checks, rounds + LAGS), dtype=np.int64)
-    for b in range(complete):
-        totals[:] = 0
-        for i in range(b * BLOCK, (b + 1) * BLOCK):
-            for r in range(rounds):
-                for c in range(checks):
-                    totals[c, r] += events[i, r, c]
-        home = batch[b * BLOCK]
-        for p in range(pairs.shape[0]):
-            early, late = pairs[p, 0], pairs[p, 1]
-            for r in range(rounds):
-                for lag in range(LAGS):
-                    block_products[home, p, r, lag] += totals[early, r] * totals[late, r + lag]
+def _count_after(leaked, closing, after, before):  # type: ignore[no-untyped-def]
+    """Add leaked closing labels after leaked labels `lag` rounds before the last round."""
+    blocks, rounds, checks = leaked.shape
+    for b in range(blocks):
+        for lag in range(min(LAGS, rounds)):
+            for m in range(checks):
+                word = leaked[b, rounds - 1 - lag, m]
+                if word == 0:
+                    continue
+                before[lag, m] += np.int64(_ones(word))
+                for q in range(closing.shape[1]):
+                    after[lag, m, q] += np.int64(_ones(word & closing[b, q]))
 
 
 def count_numpy(
     events: NDArray[np.uint8],
     valid: NDArray[np.bool_],
+    leaked: NDArray[np.bool_],
+    closing_leaked: NDArray[np.bool_],
     pairs: IntArray,
     batch: IntArray,
-    first: int,
-    shots_in_recording: int,
-) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray, IntArray]:
-    """Count events and their products the clear way; same arguments and results as `count`."""
+    missing: int = 0,
+) -> DetectionSums:
+    """Count the clear way; same arguments and result as `count`."""
     shots, layers, checks = events.shape
-    event_sums = np.zeros((BATCHES, layers, checks), dtype=np.int64)
-    trials = np.zeros_like(event_sums)
-    np.add.at(event_sums, batch, np.where(valid, events, 0).astype(np.int64))
-    np.add.at(trials, batch, valid.astype(np.int64))
-    interior = max(layers - 2, 0)
-    clean = np.where(valid, events, 0)[:, 1 : layers - 1].astype(np.int64)
-    products = np.zeros((BATCHES, len(pairs), interior, LAGS), dtype=np.int64)
-    block_products = np.zeros_like(products)
-    complete = min(shots, shots_in_recording - first) // BLOCK
-    totals = clean[: complete * BLOCK].reshape(complete, BLOCK, interior, checks).sum(axis=1)
-    block_batch = batch[: complete * BLOCK : BLOCK]
+    rounds = layers - 1
+    sums = _nothing(rounds, checks, closing_leaked.shape[1], len(pairs), missing)
+    np.add.at(sums["shots"], batch, 1)
+    np.add.at(sums["events"], batch, np.where(valid, events, 0))
+    np.add.at(sums["trials"], batch, valid)
+    np.add.at(sums["leaked"], batch, leaked)
+    np.add.at(sums["closing_leaked"], batch, closing_leaked)
+    clean = np.where(valid, events, 0)[:, 1:rounds].astype(np.int32)
+    interior, full = clean.shape[1], shots // BLOCK
+    totals = clean[: full * BLOCK].reshape(full, BLOCK, interior, checks).sum(axis=1)
+    block_batch = batch[: full * BLOCK : BLOCK]
+    np.add.at(sums["blocks"], block_batch, 1)
+    np.add.at(sums["block_shots"], block_batch, BLOCK)
     for p, (early, late) in enumerate(pairs):
         for lag in range(min(LAGS, interior)):
             stop = interior - lag
-            here = products[:, p, :stop, lag]
+            here = sums["products"][:, p, :stop, lag]
             np.add.at(here, batch, clean[:, :stop, early] * clean[:, lag:, late])
-            there = block_products[:, p, :stop, lag]
+            there = sums["block_products"][:, p, :stop, lag]
             np.add.at(there, block_batch, totals[:, :stop, early] * totals[:, lag:, late])
-    blocks = np.bincount(block_batch, minlength=BATCHES).astype(np.int64)
-    return event_sums, trials, products, block_products, blocks, blocks * BLOCK
+    for lag in range(min(LAGS, rounds)):
+        then = leaked[:, rounds - 1 - lag].astype(np.int64)
+        sums["after_leaked"][lag] = then.T @ closing_leaked.astype(np.int64)
+        sums["leaked_before"][lag] = then.sum(axis=0)
+    return DetectionSums(**sums)
