@@ -7,6 +7,7 @@ forms, a standard error for what was simulated, None with a reason where it has 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -37,7 +38,7 @@ DEFINITIONS = {
     "settling_rounds": "-1 / ln(1 - G - S); of the code: the time at which the leaked data and "
     "measure population together has covered 1 - 1/e of its way from round 1 to the steady level",
     "detection_rise": "steady level over start minus one of the mean over checks; start: the "
-    "settling law continued to round 0; from_layer_2: start at the first interior layer",
+    "settling law continued to round 0; from_layer_2: start at layer 2",
     "logical_error_per_round": "1 - 2 P(R) = A (1 - 2 eps)^R over the recordings' R, R = 1 left "
     "out; hard labels of the device, matching decoder",
     "leakage_share": "(eps with - eps without) / eps with, same decoder, injection set to zero",
@@ -50,12 +51,13 @@ COUPLED = "transport couples the qubits: steady levels by mean field, rates with
 
 KAPPA_ERROR = 0.05
 KAPPA_REASON = (
-    "limit of leakage that starts and ends between rounds; with injection per gate 400 000 shots of "
-    "distance 3 gave 1.02 to 1.04 (outcome random) and 1.06 to 1.08 (detector random)"
+    "limit of leakage that starts and ends between rounds; with injection per gate 400 000 shots "
+    "of distance 3 gave 1.02 to 1.04 (outcome random) and 1.06 to 1.08 (detector random)"
 )
 
-FIRST_INTERIOR = 2
-"""First layer in which every check compares two rounds."""
+FIRST_INTERIOR = {True: 2, False: 3}
+"""First layer in which every check compares two rounds, with and without reset. Without reset a
+detection event compares a bit with the one two rounds before, and the bit before round 1 is sure."""
 
 
 @dataclass(frozen=True)
@@ -77,23 +79,29 @@ class Known:
 
 
 def detection_rise(
-    outcome: Outcome, layout: Layout, basis: Basis, settling: float, start_layer: int = 0
+    outcome: Outcome,
+    layout: Layout,
+    basis: Basis,
+    settling: float,
+    start_layer: int = 0,
+    *,
+    reset: bool = True,
 ) -> Known:
-    """Return the relative rise of the mean detection probability over interior layers 2..R.
+    """Return the relative rise of the mean detection probability over interior layers up to R.
 
     A linear fit of d[r] = A - B lam^(r - start) with the known settling time: B / (A - B).
     The error takes the layers' means as independent binomials, checks and layers alike.
     """
-    rounds = outcome.rounds
-    if rounds < FIRST_INTERIOR + 2 or not np.isfinite(settling) or settling <= 0:
-        return Known(None, None, "needs four rounds and a settling time")
-    inside = slice(FIRST_INTERIOR - 1, rounds)
+    rounds, first = outcome.rounds, FIRST_INTERIOR[reset]
+    if rounds < first + 2 or not np.isfinite(settling) or settling <= 0:
+        return Known(None, None, "needs more rounds and a settling time")
+    inside = slice(first - 1, rounds)
     probability = outcome.detection[inside]
     assert defined_layers(layout, basis, rounds)[inside].all()
     mean = probability.mean(axis=1)
     spread = np.sqrt((probability * (1 - probability)).sum(axis=1) / outcome.shots)
     spread /= probability.shape[1]
-    turns = np.arange(FIRST_INTERIOR, rounds + 1)
+    turns = np.arange(first, rounds + 1)
     keep = np.exp((start_layer - turns) / settling)
     design = np.stack([np.ones(len(turns)), -keep], axis=1)
     scaled = design / spread[:, None]
@@ -155,7 +163,7 @@ def patch_truth(
         share = share_truth(
             setting, sorted(set(scenario.rounds)), scenario.truth.shots, decoder_for, rng
         )
-    return entry | _logical(share, layout, basis, settling)
+    return entry | _logical(share, setting, settling)
 
 
 def _kappa(layout: Layout, epoch: Epoch) -> Known:
@@ -202,21 +210,27 @@ def _qubit(
     }
 
 
-def _logical(share: Share | None, layout: Layout, basis: Basis, settling: float) -> dict[str, Any]:
+def _logical(share: Share | None, setting: Setting, settling: float) -> dict[str, Any]:
     if share is None:
         missing = Known(None, None, "not simulated").to_json()
         names = ("logical_error_per_round", "leakage_share", "detection_rise")
         return dict.fromkeys(names, missing)
     longest = max(share.outcomes, key=lambda one: one.rounds)
     fits = share.with_leakage, share.without
+    rise_from = partial(
+        detection_rise,
+        longest,
+        setting.layout,
+        setting.basis,
+        settling,
+        reset=setting.reset,
+    )
     return {
         "logical_error_per_round": Known(fits[0].value, fits[0].error).to_json(),
         "logical_error_per_round_without": Known(fits[1].value, fits[1].error).to_json(),
         "leakage_share": Known(share.value, share.error).to_json(),
-        "detection_rise": detection_rise(longest, layout, basis, settling).to_json(),
-        "detection_rise_from_layer_2": detection_rise(
-            longest, layout, basis, settling, FIRST_INTERIOR
-        ).to_json(),
+        "detection_rise": rise_from(0).to_json(),
+        "detection_rise_from_layer_2": rise_from(2).to_json(),
         "logical_fit": [
             {"chi_square": fit.chi_square, "freedom": fit.freedom, "amplitude": fit.amplitude}
             for fit in fits
