@@ -86,8 +86,8 @@ def run_log_block(summary: Mapping[str, Any], changes: Sequence[Finding] | None 
     summary
         What `leakpipe.report.summary.summary` returned.
     changes
-        Findings about what moved since the last calibration; empty if nothing did, None if there
-        is no earlier epoch to compare with.
+        Findings about what moved since the last calibration; empty if nothing did, None if no
+        earlier epoch was compared with.
     """
     word, said = verdict(summary)
     parts = [_Part(word, said, 2, _FIXED), _Part("epoch", _epoch(summary), 3, 8)]
@@ -239,7 +239,7 @@ def _sentence(text: str) -> str:
 def changed_words(changes: Sequence[Finding] | None) -> str:
     """Return what moved since the last calibration, in words."""
     if changes is None:
-        return "no earlier epoch to compare with."
+        return "not compared with an earlier epoch."
     if not changes:
         return "nothing beyond noise since the last calibration."
     return " ".join(placed(change.where, change.sentence) for change in changes)

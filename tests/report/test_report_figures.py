@@ -220,6 +220,22 @@ def test_placed_class_is_not_drawn(patch, tmp_path):
     written("readout-clouds", placed, tmp_path)
 
 
+def test_points_are_drawn_where_given(patch, tmp_path):
+    """Calibration points, missing ones among them, appear in the panels of their qubits only."""
+    rng = np.random.default_rng(3)
+    iq = rng.normal(size=(2, 2, 40, 2))
+    iq[0, 0, :5] = np.nan
+    points = xr.Dataset(
+        {"iq": (("qubit", "prepared", "point", "quadrature"), iq)},
+        coords={"qubit": ["D0", "elsewhere"], "prepared": [0, 1]},
+    )
+    drawing, _ = written("readout-clouds", replace(patch, points=points), tmp_path)
+    clouds = [
+        line for panel in drawing.figure.axes for line in panel.lines if line.get_rasterized()
+    ]
+    assert [len(line.get_xdata()) for line in clouds] == [40, 40]
+
+
 def small_readout(values, shots, shot_error, calibration_error):
     """Return a patch whose readout stage holds (recording, round, measure) values."""
     recordings, rounds, measure = values.shape

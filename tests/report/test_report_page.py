@@ -4,6 +4,7 @@ import base64
 import hashlib
 import re
 from dataclasses import replace
+from functools import cache
 from html.parser import HTMLParser
 from itertools import pairwise
 
@@ -58,7 +59,9 @@ class Reader(HTMLParser):
         ]
 
 
+@cache
 def read(html):
+    """Parse a page once, however many tests look at it."""
     reader = Reader()
     reader.feed(html)
     reader.close()

@@ -199,7 +199,7 @@ def _cloud(patch: PatchReport, panel: Axes, qubit: object, origin: Array, turn: 
     iq = patch.points["iq"].sel(qubit=qubit).transpose("prepared", "point", "quadrature").values
     if iq.shape[-1] != turn.shape[0]:
         return
-    for prepared, cloud in enumerate(iq[: len(COLORS)]):
+    for prepared, cloud in zip(patch.points["prepared"].values.tolist(), iq, strict=True):
         spots = (cloud[:MOST_POINTS] - origin) @ turn
         panel.plot(
             *spots.T, ".", color=LIGHT[COLORS[prepared]], markersize=1.6, alpha=0.5,
