@@ -69,7 +69,7 @@ class Ledger:
                 tuple(map(str, found["problems"])),
                 str(found["settled"]),
             )
-        except (OSError, ValueError, KeyError, TypeError):
+        except (OSError, ValueError, KeyError, TypeError, AttributeError):
             return cls({}, {}, {}, {})
 
     def save(self, folder: Path) -> None:
