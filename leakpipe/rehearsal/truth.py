@@ -56,8 +56,8 @@ KAPPA_REASON = (
 )
 
 FIRST_INTERIOR = {True: 2, False: 3}
-"""First layer in which every check compares two rounds, with and without reset. Without reset a
-detection event compares a bit with the one two rounds before, and the bit before round 1 is sure."""
+"""First layer in which every check compares two rounds, with and without reset. Without reset an
+event compares a bit with the one two rounds before, and the bit before round 1 is sure."""
 
 
 @dataclass(frozen=True)
