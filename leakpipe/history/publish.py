@@ -20,9 +20,10 @@ def store_of(results: Path) -> Store:
 
 
 def unpublished(done: Iterable[Finished], store: Store) -> list[Finished]:
-    """Return the results that the history does not hold as they are."""
+    """Return the results that the history does not hold as they are, first made first."""
     made = store.made()
-    return [one for one in done if made.get(one.key) != _utc(one.made_at)]
+    found = [one for one in done if made.get(one.key) != _utc(one.made_at)]
+    return sorted(found, key=lambda one: (_utc(one.made_at), one.folder.name))
 
 
 def _utc(moment: str) -> str:
