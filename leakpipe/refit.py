@@ -116,8 +116,8 @@ def repeat(
         start = time.monotonic()
         try:
             last = one_pass()
-            if last.made or last.problems or last.failures or last.busy:
-                say(last.text())
+            if news := last.news():
+                say(news)
         except LeakpipeError as error:
             say(str(error))
         stop.wait(max(every_seconds - (time.monotonic() - start), 0.0))
@@ -148,7 +148,8 @@ class _Refit:
         self.store = store_of(self.results)
         self.settings = settings_digest(config)
         self.ledger = Ledger.load(self.results)
-        self.told = Pass()
+        failures = (text for _, text in self.ledger.failures.values())
+        self.told = Pass(said_before=(*self.ledger.problems, *failures))
 
     def through(self) -> Pass:
         """Do the pass."""

@@ -125,6 +125,8 @@ class Pass:
         True if another refit holds the lock: nothing was done.
     stopped
         True if the pass was asked to stop before it was through.
+    said_before
+        Problems and failures that the pass before told already.
     """
 
     made: list[Path] = field(default_factory=list)
@@ -134,6 +136,7 @@ class Pass:
     failures: list[str] = field(default_factory=list)
     busy: bool = False
     stopped: bool = False
+    said_before: tuple[str, ...] = ()
 
     @property
     def exit_code(self) -> int:
@@ -151,6 +154,13 @@ class Pass:
             "busy": self.busy,
             "stopped": self.stopped,
         }
+
+    def news(self) -> str:
+        """Return what a timer's mail should say: results made, and problems not said before."""
+        lines = [f"made     {folder}" for folder in self.made]
+        lines += [f"problem  {text}" for text in self.problems if text not in self.said_before]
+        lines += [f"failed   {text}" for text in self.failures if text not in self.said_before]
+        return "\n".join(lines)
 
     def text(self) -> str:
         """Return the pass for people: one line, and one more for each thing to know."""
