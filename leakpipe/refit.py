@@ -39,7 +39,19 @@ if TYPE_CHECKING:
     from leakpipe.findings import Finding
     from leakpipe.progress import Reporter
 
-__all__ = ["Job", "Pass", "Plan", "Planner", "Runner", "StopSwitch", "Tools", "refit", "repeat"]
+__all__ = [
+    "Job",
+    "Pass",
+    "Plan",
+    "Planner",
+    "Runner",
+    "StopSwitch",
+    "Tools",
+    "refit",
+    "repeat",
+    "standard_tools",
+    "stop_on_signals",
+]
 
 RESULT_VERSION = 1
 """Raised by hand when a change of leakpipe changes numbers: every result is then stale."""
@@ -77,6 +89,29 @@ def stop_on_signals() -> Iterator[StopSwitch]:
     finally:
         for number, handler in before.items():
             signal.signal(number, handler)
+
+
+def standard_tools() -> Tools:
+    """Return the tools that make real results; the pipeline is imported when there is work."""
+
+    def plan(config: Config, complete: Sequence[Path], waiting: Sequence[Path]) -> Plan:
+        from leakpipe.history.planning import plan_recordings
+
+        return plan_recordings(config, complete, waiting)
+
+    def run(
+        job: Job, folder: Path, config: Config, findings: Sequence[Finding], reporter: Reporter
+    ) -> None:
+        from leakpipe.pipeline import run_job
+
+        run_job(job, folder, config, findings, reporter)
+
+    def closing(config: Config) -> None:
+        from leakpipe.pipeline import close_pass
+
+        close_pass(config)
+
+    return Tools(plan, run, closing)
 
 
 def refit(
