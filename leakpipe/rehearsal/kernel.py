@@ -278,7 +278,8 @@ def run_blocks(
         Outputs: (shot, round, M), (shot, D), (shot, D) uint8; (round, D + M) counts of leaked shots
         at the end of each round.
     seeds
-        (blocks, 4) generator states.
+        (blocks, 8) generator states: four words for errors, four for everything about leakage. Two
+        runs with the same seeds and error rates make the same errors, whatever leaks in them.
     gates
         (gates, 2) control and target in time order; qubits are numbered data first.
     turned
@@ -308,15 +309,19 @@ def run_blocks(
     leak = np.empty((data + measures, WORDS), dtype=np.uint64)
     read = np.empty((max(data, measures), WORDS), dtype=np.uint64)
     random = np.empty(4, dtype=np.uint64)
+    leaky = np.empty(4, dtype=np.uint64)
     clock = np.empty(1)
+    leak_clock = np.empty(1)
     for block in range(seeds.shape[0]):
         first = block * BLOCK_SHOTS
         here = min(shots - first, BLOCK_SHOTS)
-        random[:] = seeds[block]
+        random[:] = seeds[block, :4]
+        leaky[:] = seeds[block, 4:]
         clock[0] = _exponential(random)
+        leak_clock[0] = _exponential(leaky)
         for qubit in range(data + measures):
             leak[qubit] = uint64(0)
-            _set(leak[qubit], hazards[6, qubit], clock, random)
+            _set(leak[qubit], hazards[6, qubit], leak_clock, leaky)
         for qubit in range(data):
             for word in range(WORDS):
                 x[qubit, word] = _next(random)
@@ -330,10 +335,10 @@ def run_blocks(
         for turn in range(rounds):
             scale = error_scale[turn]
             for qubit in range(data + measures):
-                _seep(x[qubit], z[qubit], leak[qubit], chances[0, qubit], random)
+                _seep(x[qubit], z[qubit], leak[qubit], chances[0, qubit], leaky)
             for qubit in range(data, data + measures):
                 if reset or turn == 0:
-                    _seep(x[qubit], z[qubit], leak[qubit], chances[1, qubit], random)
+                    _seep(x[qubit], z[qubit], leak[qubit], chances[1, qubit], leaky)
                     x[qubit] = uint64(0)
                     _flip(x[qubit], hazards[2, qubit], clock, random)
                 # The state is a definite bit here, so its phase frame is arbitrary; drawing it
@@ -341,9 +346,9 @@ def run_blocks(
                 for word in range(WORDS):
                     z[qubit, word] = _next(random)
             for qubit in range(data + measures):
-                _set(leak[qubit], hazards[5, qubit], clock, random)
+                _set(leak[qubit], hazards[5, qubit], leak_clock, leaky)
             if injected[1] == turn:
-                _set(leak[injected[0]], injected_hazard, clock, random)
+                _set(leak[injected[0]], injected_hazard, leak_clock, leaky)
             for check in range(measures):
                 if turned[check]:
                     qubit = data + check
@@ -351,10 +356,10 @@ def run_blocks(
                     _depolarise(x[qubit], z[qubit], scale * hazards[0, qubit], clock, random)
             for gate in range(gates.shape[0]):
                 control, target = gates[gate]
-                _gate(x, z, leak, control, target, consequence, random)
+                _gate(x, z, leak, control, target, consequence, leaky)
                 _depolarise_pair(x, z, control, target, scale * gate_hazard[gate], clock, random)
-                _set(leak[control], hazards[4, control], clock, random)
-                _set(leak[target], hazards[4, target], clock, random)
+                _set(leak[control], hazards[4, control], leak_clock, leaky)
+                _set(leak[target], hazards[4, target], leak_clock, leaky)
             for check in range(measures):
                 qubit = data + check
                 if turned[check]:

@@ -102,7 +102,9 @@ def simulate(
     noise
         Errors and leakage.
     rng
-        Source of the seeds; one generator state is drawn from it per 1024 shots, and nothing else.
+        Source of the seeds; two generator states are drawn from it per 1024 shots, and nothing
+        else. Errors and leakage have one each: runs with the same seed and the same error rates
+        make the same errors, whatever leaks in them.
     injected
         A leak made on purpose.
     reset
@@ -135,7 +137,7 @@ def simulate(
     if scale.shape != (rounds,) or not np.all(scale >= 0):
         raise ConfigError("error_scale must hold one factor of 0 or more per round")
     blocks = -(-shots // BLOCK_SHOTS)
-    seeds = rng.integers(0, 2**64, size=(blocks, 4), dtype=np.uint64)
+    seeds = rng.integers(0, 2**64, size=(blocks, 8), dtype=np.uint64)
     states = np.empty((shots, rounds, measures), dtype=np.uint8)
     final_states = np.empty((shots, data), dtype=np.uint8)
     prepared = np.empty((shots, data), dtype=np.uint8)

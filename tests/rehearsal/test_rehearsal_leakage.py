@@ -376,3 +376,20 @@ def test_transport_spreads_the_steady_level() -> None:
     # The mean field neglects correlations: allow two percent of the value beside chance.
     limits = limit(17) * np.sqrt(steady / shots) + 0.02 * steady
     assert (np.abs(seen - steady) < limits).all()
+
+
+def test_leakage_leaves_the_errors_alone() -> None:
+    """Two runs of one seed make the same errors: shots without any leak are the same in both."""
+    noise = replace(LEAKY, two_qubit=0.01, measurement=0.02, injection=1e-3)
+    leaky, quiet = (
+        simulate(SURFACE, "Z", 6, 4000, one, np.random.default_rng(17))
+        for one in (noise, noise.without_injection())
+    )
+    np.testing.assert_array_equal(leaky.prepared, quiet.prepared)
+    same = (leaky.states == quiet.states).all(axis=(1, 2))
+    same &= (leaky.final_states == quiet.final_states).all(axis=1)
+    seen = (leaky.states == 2).any(axis=(1, 2)) | (leaky.final_states == 2).any(axis=1)
+    assert not same[seen].any()
+    # No leak in any of 6 rounds and 17 qubits: at least the probability that none was injected.
+    gates = 48 * 6
+    assert same.mean() > (1 - 1e-3) ** gates - 5 * 0.5 / np.sqrt(4000)

@@ -121,14 +121,14 @@ def test_labelled_recordings_hold_the_true_population(tmp_path: Path) -> None:
 
 
 def test_counterfactual_needs_leakage(tmp_path: Path) -> None:
-    """A device that cannot leak has a share of zero within its error; a leaky one has more."""
+    """A device that cannot leak has a share of exactly zero; a leaky one has more."""
     more = {"rounds": (2, 5, 8), "truth": {"shots": 20_000, "readout_shots": 2000}, "shots": 10}
     _, quiet = written(tmp_path / "quiet", noise={}, **more)
     _, leaky = written(tmp_path / "leaky", noise={"injection": 3e-3, "seepage": 0.2}, **more)
     quiet_share, leaky_share = (
         one["epochs"][0]["patches"][0]["leakage_share"] for one in (quiet, leaky)
     )
-    assert abs(quiet_share["value"]) < norm.isf(FALSE_ALARM / 2) * quiet_share["error"]
+    assert quiet_share == {"value": 0.0, "error": 0.0}
     assert leaky_share["value"] > norm.isf(FALSE_ALARM) * leaky_share["error"]
     settling = quiet["epochs"][0]["patches"][0]["settling_rounds"]
     assert settling["value"] is None
