@@ -79,7 +79,7 @@ def fit_separable(
 
     def solve(at: FloatArray) -> tuple[FloatArray, FloatArray]:
         phi = basis(at) * root[:, None]
-        coefficients = np.linalg.lstsq(phi, values * root, rcond=None)[0]
+        coefficients = np.asarray(np.linalg.lstsq(phi, values * root, rcond=None)[0], dtype=float)
         return coefficients, values * root - phi @ coefficients
 
     sums = np.array([np.sum(solve(at)[1] ** 2) for at in candidates])
