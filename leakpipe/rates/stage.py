@@ -388,7 +388,7 @@ def _code_estimates(
     else:
         relative = Estimate.from_error(rise.relative, rise.relative_error, basis, freedom=FREEDOM)
     settling = _settling(together, rise)
-    ratio = _kappa(rise, same, together, settings, len(curves.events[0, 0]))
+    ratio = _kappa(rise, same, together, settings, curves.events.shape[2])
     return {
         **store("detection_rise", (), relative, long_name="relative rise of detection"),
         **store("settling_rounds", (), settling, units="rounds"),

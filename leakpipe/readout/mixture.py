@@ -24,6 +24,8 @@ BACKGROUND_START = 1e-4
 CONVERGED = 1e-8
 """Relative change of the log-likelihood per step that ends EM."""
 STEPS = 300
+NO_MASS = 1e-12
+"""Share of all points below which a class holds nothing that could place its mean."""
 LARGEST_DECAY = 0.3
 """A decay probability above this means that T1 is about the window: no tail model serves."""
 
@@ -173,7 +175,10 @@ def _step(
         likelihood += value
     together = mass.sum(axis=0)
     gram = (parts.mixing * together[:, None]).T @ parts.mixing
-    means = np.linalg.solve(gram, parts.mixing.T @ first)
+    # A class without any mass (a state that was neither prepared nor seeded) stays where it is.
+    seen = np.diag(gram) > NO_MASS * together.sum()
+    means = now.means.copy()
+    means[seen] = np.linalg.solve(gram[np.ix_(seen, seen)], (parts.mixing.T @ first)[seen])
     centres = parts.mixing @ means
     scatter = second - first.T @ centres - centres.T @ first
     scatter = scatter + (centres * together[:, None]).T @ centres
