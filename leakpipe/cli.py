@@ -165,7 +165,7 @@ def refit(
     loaded = _load(config, recordings, out, settings)
     from leakpipe.history.duration import seconds
     from leakpipe.refit import refit as one_pass
-    from leakpipe.refit import repeat, stop_on_signals
+    from leakpipe.refit import repeat, standard_tools, stop_on_signals
 
     if rebuild:
         from leakpipe.history.publish import store_of
@@ -173,7 +173,7 @@ def refit(
         for problem in store_of(loaded.results).rebuild(loaded.results):
             click.echo(problem, err=True)
     reporter = reporter_for(quiet=quiet)
-    tools = _refit_tools()
+    tools = standard_tools()
     with stop_on_signals() as stop:
         if every is not None:
             repeat(
@@ -184,33 +184,21 @@ def refit(
             )
             return 0
         done = one_pass(loaded, tools, reporter, stop=stop)
-    click.echo(json.dumps(done.to_json(), indent=1) if as_json else done.text())
+    if as_json:
+        click.echo(json.dumps(done.to_json(), indent=1))
+    elif said := done.news() if quiet else done.text():
+        click.echo(said)
     return EXIT_INTERRUPTED if done.stopped else done.exit_code
-
-
-def _refit_tools() -> Any:
-    """Return tools that import the pipeline only when there is something to run."""
-    from leakpipe.history.jobs import Tools
-    from leakpipe.history.planning import plan_recordings
-
-    def run_job(*arguments: Any) -> None:
-        from leakpipe.pipeline import run_job as run_one
-
-        run_one(*arguments)
-
-    def closing(loaded: Config) -> None:
-        from leakpipe.pipeline import close_pass
-
-        close_pass(loaded)
-
-    return Tools(plan=plan_recordings, run=run_job, closing=closing)
 
 
 @commands.command()
 @_config_options
 @click.option("--quantity", help="Only this quantity, such as steady_leakage, for every qubit.")
 @click.option("--qubit", help="Only this qubit, epoch by epoch.")
-@click.option("--epochs", "list_epochs", is_flag=True, help="List the epochs.")
+@click.option("--patch", help="Only this patch.")
+@click.option("--since", metavar="CALIBRATION", help="Only epochs from this calibration on.")
+@click.option("--epochs", "view", flag_value="epochs", help="List the epochs.")
+@click.option("--changes", "view", flag_value="changes", help="Only what changed.")
 def log(
     config: Path,
     recordings: Path | None,
@@ -220,25 +208,22 @@ def log(
     as_json: bool,
     quantity: str | None,
     qubit: str | None,
-    list_epochs: bool,
+    patch: str | None,
+    since: str | None,
+    view: str | None,
 ) -> int:
     """Show the history: what is known, how it moved, what changed."""
     loaded = _load(config, recordings, out, settings)
-    from leakpipe.history import terminal
-    from leakpipe.history.changes import changes
-    from leakpipe.history.publish import store_of
+    from leakpipe.history.log import log as history
 
-    store = store_of(loaded.results)
-    rows = store.rows()
-    flags = [one.to_json() for one in changes(rows, {}, loaded.history)]
-    if as_json:
-        click.echo(json.dumps(terminal.log_json(store.epochs(), rows, flags), indent=1))
-    elif list_epochs:
-        click.echo(terminal.epochs_text(store.epochs()))
-    elif qubit is not None:
-        click.echo(terminal.qubit_text(rows, qubit, quantity or "steady_leakage"))
-    elif quantity is not None:
-        click.echo(terminal.quantity_text(rows, quantity))
-    else:
-        click.echo(terminal.overview_text(rows, flags))
+    shown = history(
+        loaded,
+        view or "overview",
+        qubit=qubit,
+        quantity=quantity,
+        patch=patch,
+        since=since,
+        as_json=as_json,
+    )
+    click.echo(json.dumps(shown, indent=1) if as_json else shown)
     return 0

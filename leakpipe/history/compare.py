@@ -10,6 +10,7 @@ from leakpipe.codes.layout import Layout
 from leakpipe.config.history import HistorySettings
 from leakpipe.findings import Finding
 from leakpipe.history.changes import at_epoch, changes
+from leakpipe.history.chart import WARM_UP
 from leakpipe.history.limits import over_limits
 from leakpipe.history.rows import Row, rows_of
 from leakpipe.history.store import Store
@@ -48,7 +49,19 @@ def since_last(
     if not before:
         return None
     found = changes([*before, *mine], neighbours, settings)
-    return at_epoch(found, str(summary["calibration_id"]))
+    earlier = len({row.calibration_id for row in before})
+    told = at_epoch(found, str(summary["calibration_id"]))
+    return told if earlier >= WARM_UP else [*told, _too_early(patches, earlier, settings)]
+
+
+def _too_early(patches: set[str], earlier: int, settings: HistorySettings) -> Finding:
+    """Silence of a chart that has not begun is no good news: say so."""
+    sentence = (
+        f"{earlier} earlier epoch{'' if earlier == 1 else 's'} of {WARM_UP} that comparison "
+        f"needs: so far only jumps of a qubit by a factor {settings.limits.jump:g} would be told."
+    )
+    where = ", ".join(sorted(patches))
+    return Finding("changes-not-watched-yet", "note", where, sentence, {"earlier": earlier})
 
 
 def limits_of(summary: Mapping[str, Any], settings: HistorySettings) -> list[Finding]:

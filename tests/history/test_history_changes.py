@@ -212,7 +212,18 @@ def test_the_first_epoch_has_nothing_to_compare_with(tmp_path: Path) -> None:
     assert since_last(store, one, NEIGHBOURS, SETTINGS) is None
     store.add(one)
     assert since_last(store, one, NEIGHBOURS, SETTINGS) is None
-    assert since_last(store, two, NEIGHBOURS, SETTINGS) == []
+    told = since_last(store, two, NEIGHBOURS, SETTINGS)
+    assert [(item.code, item.severity) for item in told] == [("changes-not-watched-yet", "note")]
+    assert "1 earlier epoch of 10" in told[0].sentence
+
+
+def test_silence_is_good_news_only_once_the_chart_has_begun(tmp_path: Path) -> None:
+    """With ten earlier epochs an empty list says that nothing moved."""
+    store = Store(tmp_path / "h.sqlite")
+    summaries = season(11, np.random.default_rng(3))
+    for one in summaries[:-1]:
+        store.add(one)
+    assert since_last(store, summaries[-1], NEIGHBOURS, SETTINGS) == []
 
 
 def test_limits_act_where_the_interval_is_above_and_watch_where_only_the_value_is() -> None:
