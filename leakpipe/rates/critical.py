@@ -129,12 +129,21 @@ def _rising_gain(
     return np.asarray(np.maximum(along, 0.0).max(axis=1) ** 2)
 
 
-def two_exponential_sums(rounds: FloatArray, values: FloatArray, weight: FloatArray) -> FloatArray:
-    """Return the residual sums of m curves about a constant and two exponentials, (m,).
+def two_exponentials(
+    rounds: FloatArray, values: FloatArray, weight: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return residual sums of m curves about a constant and two exponentials, and their ln tau.
 
     Both amplitudes have one sign: leaked populations of different settling times add up. The two
     settling times are searched on a grid, so the sum is an upper bound of the minimum; the critical
     values come from the same search.
+
+    Returns
+    -------
+    sums
+        (m,).
+    log_taus
+        (m, 2); equal where one exponential of the grid does better.
     """
     start, end = search_grid(rounds.max())[[0, -1]]
     grid = np.linspace(start, end, PAIR_POINTS)
@@ -150,13 +159,20 @@ def two_exponential_sums(rounds: FloatArray, values: FloatArray, weight: FloatAr
     shared = overlap[first, second]
     centred = values - ((values @ weight) / total)[:, None]
     along = (centred * weight) @ decay.T
+    single = np.argmax(along**2, axis=1)
     gain = (along**2).max(axis=1)
+    log_taus = np.column_stack([grid[single], grid[single]])
     for begin in range(0, len(values), CHUNK):
-        one, two = along[begin : begin + CHUNK, first], along[begin : begin + CHUNK, second]
+        rows = np.arange(begin, min(begin + CHUNK, len(values)))
+        one, two = along[rows][:, first], along[rows][:, second]
         a, b = (one - shared * two) / apart, (two - shared * one) / apart
-        gains = np.where(a * b > 0, a * one + b * two, 0.0).max(axis=1)
-        gain[begin : begin + CHUNK] = np.maximum(gain[begin : begin + CHUNK], gains)
-    return np.asarray((centred**2) @ weight - gain)
+        gains = np.where(a * b > 0, a * one + b * two, 0.0)
+        at = np.argmax(gains, axis=1)
+        best = gains[np.arange(len(rows)), at]
+        better = best > gain[rows]
+        gain[rows[better]] = best[better]
+        log_taus[rows[better]] = np.column_stack([grid[first[at]], grid[second[at]]])[better]
+    return np.asarray((centred**2) @ weight - gain), log_taus
 
 
 def critical_two(rounds: FloatArray, freedom: int | None) -> tuple[float, float]:
@@ -188,4 +204,4 @@ def _simulated_two(rounds: tuple[float, ...], freedom: int | None) -> tuple[floa
 def one_against_two(rounds: FloatArray, values: FloatArray, weight: FloatArray) -> FloatArray:
     """Return the likelihood ratio of one exponential against two for m curves, (m,), 0 at least."""
     one = fit_curves(rounds, values, weight, search_grid(rounds.max())).residual_sum
-    return np.maximum(one - two_exponential_sums(rounds, values, weight), 0.0)
+    return np.maximum(one - two_exponentials(rounds, values, weight)[0], 0.0)
