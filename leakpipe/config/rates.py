@@ -19,3 +19,7 @@ class RatesSettings(Section):
     detection events."""
     draws: Annotated[int, Field(ge=100)] = 400
     """Random draws of the fitted rates that later stages carry as their errors."""
+    readout_excitation: Annotated[float, Field(ge=0, lt=0.1)] = 5e-4
+    """How large the probability to go from 1 to 2 during the readout may be; it looks like leakage
+    and no fit can tell, so it widens every leaked population (level of an average device in the
+    prototype study)."""

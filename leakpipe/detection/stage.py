@@ -160,6 +160,6 @@ def detection(
             "early": ("pair", [layout.measure[early] for early, _ in pairs]),
             "late": ("pair", [layout.measure[late] for _, late in pairs]),
         },
-        attrs={"block": BLOCK},
+        attrs={"block": BLOCK, "reset": int(all(frame.reset for frame in frames))},
     )
     return with_findings(out, findings_of_counts(frames, lost, events, trials))

@@ -89,7 +89,11 @@ def covariances(
 
 
 def fit_lags(
-    products: FloatArray, block_products: FloatArray, blocks: FloatArray, growth: FloatArray
+    products: FloatArray,
+    block_products: FloatArray,
+    blocks: FloatArray,
+    growth: FloatArray,
+    first_lag: int = FIRST_LAG,
 ) -> LagFit | None:
     """Fit a lam^k to the covariance of a set of pairs, summed over them.
 
@@ -100,11 +104,14 @@ def fit_lags(
     blocks
         (batch, round).
     growth
-        (round,) expected leaked population relative to steady, the weight of each early round.
+        (round,) expected leaked population relative to steady, the weight of each early round; 0
+        leaves a round out.
+    first_lag
+        Smallest lag that ordinary errors do not reach: 2 with reset, 3 without.
     """
     p, b = products.sum(axis=1), block_products.sum(axis=1)
     rounds, lags = p.shape[-2:]
-    lag_axis = np.arange(FIRST_LAG, min(lags, rounds - 1))
+    lag_axis = np.arange(first_lag, min(lags, rounds - 1))
     if len(lag_axis) < 3 or products.shape[1] == 0:
         return None
     weight = covariances(products[:, :1], block_products[:, :1], blocks)[1]

@@ -21,6 +21,14 @@ SPREAD_START = 0.1
 SPREAD_LEAST = 0.02
 """Least spread of lam between qubits: the same lam for all is never assumed exactly."""
 SPREAD_STEPS = 25
+START_DEVIATION = 0.1
+"""Prior deviation of the common p0 / p_ss around a cold start: a few percent are ordinary
+(imperfect preparation), and what p0 may be belongs into the settling time's error. Our choice."""
+EXCITATION_SHARE = 0.42
+"""Part of an excitation 1 to 2 during the readout that the estimator takes for leakage (measured in
+the prototype study, times the population of state 1)."""
+UPPER_POPULATION = 0.5
+"""Population of state 1 among the readings of a memory (random starting bits and syndromes)."""
 LARGEST_MEMORY = 0.995
 """lam beyond which the data of tens of rounds cannot tell it from 1."""
 
@@ -99,6 +107,7 @@ def fit_role(
     *,
     memory_prior: tuple[float, float] | None = None,
     free_start: bool,
+    excitation: float = 0.0,
 ) -> RoleFit:
     """Fit levels and memories of a role's qubits.
 
@@ -111,13 +120,17 @@ def fit_role(
     memory_prior
         Value and variance of mu from other data.
     free_start
-        Whether the population at round 0 is fitted (as a common fraction of the steady level).
+        Whether the population at round 0 is fitted freely (as a common fraction of the steady
+        level); otherwise it is held near 0 by its prior.
+    excitation
+        Standard deviation of the unknown probability to go from 1 to 2 during the readout, which
+        looks like leakage common to all rounds and is invisible to every fit test.
     """
     spread = SPREAD_START
     theta = _start(series, qubits)
     for _ in range(SPREAD_STEPS):
         theta, normal = _solve(series, qubits, theta, spread, memory_prior, free_start)
-        inverse = _inverse(normal, free_start)
+        inverse = np.linalg.pinv(normal, hermitian=True)
         lam, mu = theta[qubits : 2 * qubits], theta[2 * qubits]
         index = np.arange(qubits, 2 * qubits)
         gap = inverse[index, index] + inverse[-2, -2] - 2 * inverse[index, -2]
@@ -126,7 +139,7 @@ def fit_role(
         if abs(new - spread) < 1e-4:
             break
         spread = new
-    return _finish(series, qubits, theta, spread, memory_prior, free_start)
+    return _finish(series, qubits, theta, spread, memory_prior, free_start, excitation)
 
 
 def _start(series: Series, qubits: int) -> FloatArray:
@@ -156,15 +169,22 @@ def _model(series: Series, qubits: int, theta: FloatArray) -> tuple[FloatArray, 
 
 
 def _prior_rows(
-    qubits: int, theta: FloatArray, spread: float, memory_prior: tuple[float, float] | None
+    qubits: int,
+    theta: FloatArray,
+    spread: float,
+    memory_prior: tuple[float, float] | None,
+    free_start: bool,
 ) -> tuple[FloatArray, FloatArray]:
-    """Return residuals and slopes of lam_k ~ N(mu, s^2) and of what is known of mu."""
+    """Return residuals and slopes of lam_k ~ N(mu, s^2), of what is known of mu, and of p0."""
     size = 2 * qubits + 2
-    rows = qubits + (memory_prior is not None)
+    rows = qubits + 1 + (memory_prior is not None)
     residual, slopes = np.zeros(rows), np.zeros((rows, size))
     residual[:qubits] = (theta[qubits : 2 * qubits] - theta[2 * qubits]) / spread
     slopes[np.arange(qubits), qubits + np.arange(qubits)] = 1 / spread
     slopes[:qubits, 2 * qubits] = -1 / spread
+    if not free_start:
+        residual[qubits] = theta[-1] / START_DEVIATION
+        slopes[qubits, -1] = 1 / START_DEVIATION
     if memory_prior is not None:
         value, variance = memory_prior
         residual[-1] = (theta[2 * qubits] - value) / np.sqrt(variance)
@@ -181,34 +201,26 @@ def _solve(
     free_start: bool,
 ) -> tuple[FloatArray, FloatArray]:
     sigma = np.sqrt(series.variance)
-    free = np.ones(len(theta), dtype=bool)
-    free[-1] = free_start
-
-    def full(x: FloatArray) -> FloatArray:
-        out = theta.copy()
-        out[free] = x
-        return out
 
     def residual(x: FloatArray) -> FloatArray:
-        value, _ = _model(series, qubits, full(x))
-        prior, _ = _prior_rows(qubits, full(x), spread, memory_prior)
+        value, _ = _model(series, qubits, x)
+        prior, _ = _prior_rows(qubits, x, spread, memory_prior, free_start)
         return np.concatenate([(value - series.value) / sigma, prior])
 
     def slopes(x: FloatArray) -> FloatArray:
-        _, jacobian = _model(series, qubits, full(x))
-        _, prior = _prior_rows(qubits, full(x), spread, memory_prior)
-        return np.vstack([jacobian / sigma[:, None], prior])[:, free]
+        _, jacobian = _model(series, qubits, x)
+        _, prior = _prior_rows(qubits, x, spread, memory_prior, free_start)
+        return np.vstack([jacobian / sigma[:, None], prior])
 
-    low = np.concatenate([np.full(qubits, -1.0), np.zeros(qubits), [0.0, 0.0]])
+    # p0 may come out slightly negative by chance: a bound there would bias everything tied to it.
+    low = np.concatenate([np.full(qubits, -1.0), np.zeros(qubits), [0.0, -1.0]])
     high = np.concatenate(
         [np.full(qubits, 1.0), np.full(qubits, LARGEST_MEMORY), [LARGEST_MEMORY, 3.0]]
     )
     begin = np.clip(theta, low + 1e-6, high - 1e-6)
-    found = least_squares(
-        residual, begin[free], slopes, bounds=(low[free], high[free]), x_scale="jac"
-    )
-    theta = full(found.x)
-    return theta, _normal(series, qubits, theta, spread, memory_prior)
+    found = least_squares(residual, begin, slopes, bounds=(low, high), x_scale="jac")
+    theta = np.asarray(found.x)
+    return theta, _normal(series, qubits, theta, spread, memory_prior, free_start)
 
 
 def _normal(
@@ -217,19 +229,12 @@ def _normal(
     theta: FloatArray,
     spread: float,
     memory_prior: tuple[float, float] | None,
+    free_start: bool,
 ) -> FloatArray:
     _, jacobian = _model(series, qubits, theta)
-    _, prior = _prior_rows(qubits, theta, spread, memory_prior)
+    _, prior = _prior_rows(qubits, theta, spread, memory_prior, free_start)
     normal = (jacobian / series.variance[:, None]).T @ jacobian + prior.T @ prior
     return np.asarray(normal)
-
-
-def _inverse(normal: FloatArray, free_start: bool) -> FloatArray:
-    """Invert over the free parameters; a fixed start has no variance."""
-    size = len(normal) if free_start else len(normal) - 1
-    out = np.zeros_like(normal)
-    out[:size, :size] = np.linalg.pinv(normal[:size, :size], hermitian=True)
-    return out
 
 
 def _finish(
@@ -239,14 +244,12 @@ def _finish(
     spread: float,
     memory_prior: tuple[float, float] | None,
     free_start: bool,
+    excitation: float,
 ) -> RoleFit:
-    normal = _normal(series, qubits, theta, spread, memory_prior)
-    inverse = _inverse(normal, free_start)
+    normal = _normal(series, qubits, theta, spread, memory_prior, free_start)
+    inverse = np.linalg.pinv(normal, hermitian=True)
     value, jacobian = _model(series, qubits, theta)
-    if not free_start:
-        jacobian = jacobian.copy()
-        jacobian[:, -1] = 0.0
-    _, prior = _prior_rows(qubits, theta, spread, memory_prior)
+    _, prior = _prior_rows(qubits, theta, spread, memory_prior, free_start)
     weighted = jacobian / series.variance[:, None]
     # Shots: sandwich over clusters. Prior rows keep their own (model) covariance.
     scores = series.cluster_scores @ weighted
@@ -256,6 +259,8 @@ def _finish(
     # Calibration: one linear step per bootstrapped calibration, common to all observations.
     moved = (series.replicas - series.value) @ weighted @ inverse
     covariance = covariance + np.cov(moved, rowvar=False)
+    # Excitation during the readout shifts every level of the role alike.
+    covariance[:qubits, :qubits] += (EXCITATION_SHARE * UPPER_POPULATION * excitation) ** 2
     own = (jacobian**2 / series.variance[:, None]).sum(axis=0)[qubits : 2 * qubits]
     lam = theta[qubits : 2 * qubits]
     return RoleFit(

@@ -13,16 +13,18 @@ FloatArray = NDArray[np.float64]
 
 
 def steady_level(injection: ArrayLike, seepage: ArrayLike) -> FloatArray:
-    """Return p_ss = G / (G + S)."""
+    """Return p_ss = G / (G + S); NaN where both are 0, since any level then stays."""
     g, s = np.asarray(injection, dtype=float), np.asarray(seepage, dtype=float)
-    return np.asarray(g / (g + s))
+    total = g + s
+    return np.where(total > 0, g / np.where(total > 0, total, 1.0), np.nan)
 
 
 def settling_time(memory: ArrayLike) -> FloatArray:
-    """Return tau = -1 / ln(lam) in rounds; 0 where lam is 0 or less, infinite where it is 1."""
+    """Return tau = -1 / ln(lam) in rounds: 0 for lam <= 0, infinite for lam >= 1."""
     lam = np.asarray(memory, dtype=float)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(lam <= 0, 0.0, -1 / np.log(lam))
+    inner = (lam > 0) & (lam < 1)
+    edge = np.where(lam <= 0, 0.0, np.where(lam >= 1, np.inf, np.nan))
+    return np.where(inner, -1 / np.log(np.where(inner, lam, 0.5)), edge)
 
 
 def accumulated(
@@ -51,12 +53,17 @@ def continuous(injection: ArrayLike, seepage: ArrayLike) -> tuple[FloatArray, Fl
     g, s = np.asarray(injection, dtype=float), np.asarray(seepage, dtype=float)
     if np.any(g + s >= 1):
         raise ValueError("injection + seepage must be below 1, got " + str(np.max(g + s)))
-    scale = -np.log1p(-(g + s)) / (g + s)
+    scale = _limit_one(-np.log1p(-(g + s)), g + s)
     return np.asarray(g * scale), np.asarray(s * scale)
 
 
 def discrete(injection: ArrayLike, seepage: ArrayLike) -> tuple[FloatArray, FloatArray]:
     """Return the per-round rates of a continuous process: the inverse of `continuous`."""
     g, s = np.asarray(injection, dtype=float), np.asarray(seepage, dtype=float)
-    scale = -np.expm1(-(g + s)) / (g + s)
+    scale = _limit_one(-np.expm1(-(g + s)), g + s)
     return np.asarray(g * scale), np.asarray(s * scale)
+
+
+def _limit_one(part: FloatArray, whole: FloatArray) -> FloatArray:
+    """Return part / whole, 1 where both vanish."""
+    return np.where(whole > 0, part / np.where(whole > 0, whole, 1.0), 1.0)

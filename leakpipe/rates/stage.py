@@ -13,7 +13,7 @@ from leakpipe.codes.layout import Layout
 from leakpipe.config.rates import RatesSettings
 from leakpipe.estimates import Estimate, store
 from leakpipe.findings import Finding, with_findings
-from leakpipe.rates.correlation import LagFit, fit_lags, kappa
+from leakpipe.rates.correlation import FIRST_LAG, LagFit, fit_lags, kappa
 from leakpipe.rates.populations import LARGEST_MEMORY, RoleFit, Series, fit_role
 from leakpipe.rates.recurrence import rates_of, settling_time
 from leakpipe.rates.rise import RiseFit, amplitude_limit, fit_rise
@@ -26,8 +26,8 @@ SIGNIFICANT = 2.0
 FREEDOM = 49
 """Degrees of freedom of errors from 50 batches."""
 START_RANGE = 3.0
-"""Standard errors by which the first closing readout must exceed the fit before a population at
-round 0 is fitted."""
+"""Standard errors (root of the gain in chi-square) by which a free population at round 0 must fit
+better than a nearly cold start."""
 BAD_QUBIT = 0.9
 """Probability of being the worst of its role above which a qubit is named."""
 BAD_FACTOR = 2.0
@@ -74,7 +74,7 @@ def rates(
         Estimates per code, role, qubit and check; curves for the figures; draws.
     """
     rng = np.random.default_rng(seed)
-    curves = _interior(detection, settings.boundary_rounds)
+    curves = _interior(detection, settings.boundary_rounds + _extra_layers(detection))
     mean_rise = _fit_mean(curves)
     per_check = [_fit_mean(curves, check) for check in range(len(layout.measure))]
     same, pairs = _lag_fits(detection, mean_rise)
@@ -118,6 +118,15 @@ def rates(
         attrs={"convention": "discrete, per round: p[r+1] = p[r] + G (1 - p[r]) - S p[r]"},
     )
     return with_findings(out, _findings(out, mean_rise, same, transport_z, layout))
+
+
+def _extra_layers(detection: xr.Dataset) -> int:
+    """Return 1 without reset, where an event compares rounds two apart, else 0.
+
+    A check's value is then the change of a bit, an event the change of that: m_r xor m_(r-2). The
+    first interior layer and the first lag free of ordinary errors come one later.
+    """
+    return 0 if detection.attrs.get("reset", 1) else 1
 
 
 @dataclass(frozen=True)
@@ -168,11 +177,12 @@ def _lag_fits(detection: xr.Dataset, rise: RiseFit) -> tuple[LagFit | None, LagF
     rounds = detection["round"].values.astype(float)
     memory = np.exp(-1 / rise.tau) if rise.status in ("settled", "long") else 0.8
     fits: list[LagFit | None] = [None, None]
+    extra = _extra_layers(detection)
     # The growth of the early round's population uses lam itself: iterate.
     for _ in range(3):
-        growth = 1 - memory**rounds
+        growth = np.where(rounds > 1 + extra, 1 - memory**rounds, 0.0)
         fits = [
-            fit_lags(products[:, mask], block_products[:, mask], blocks, growth)
+            fit_lags(products[:, mask], block_products[:, mask], blocks, growth, FIRST_LAG + extra)
             for mask in (same, ~same)
         ]
         found = [fit for fit in fits if fit is not None and fit.significance > CORRELATED]
@@ -244,7 +254,7 @@ def _role_measure(readout: xr.Dataset, settings: RatesSettings, rng: np.random.G
         replicas=copies[:, rows, columns],
     )
     basis = f"leaked readings of {len(np.unique(rows))} rounds, {int(plain.sum())} recordings"
-    return _fitted(series, names, usable, reasons, basis, None, settings, rng, free_start=False)
+    return _fitted(series, names, usable, reasons, basis, None, settings, rng)
 
 
 def _role_data(
@@ -288,7 +298,7 @@ def _role_data(
     elif durations < 2:
         reason = "one number of rounds and no correlations: settling and steady level not separable"
         return _no_role(names, [reason] * len(names), settings)
-    return _fitted(series, names, usable, reasons, basis, prior, settings, rng, free_start=True)
+    return _fitted(series, names, usable, reasons, basis, prior, settings, rng)
 
 
 def _even_error(error: FloatArray, shots: NDArray[np.int64]) -> FloatArray:
@@ -340,8 +350,6 @@ def _fitted(
     prior: tuple[float, float] | None,
     settings: RatesSettings,
     rng: np.random.Generator,
-    *,
-    free_start: bool,
 ) -> _Role:
     place = np.cumsum(usable) - 1
     series = Series(
@@ -353,15 +361,13 @@ def _fitted(
         series.replicas,
     )
     count = int(usable.sum())
-    fit = fit_role(series, count, memory_prior=prior, free_start=free_start)
-    if free_start:
-        error = float(np.sqrt(fit.covariance[-1, -1]))
-        if fit.start < START_RANGE * error:
-            # The population at round 0 is compatible with none: a cold start is the simpler model,
-            # and freeing it would only widen the settling time.
-            fit = fit_role(series, count, memory_prior=prior, free_start=False)
-        else:
-            basis += "; with a leaked population at round 0"
+    excitation = settings.readout_excitation
+    fit = fit_role(series, count, memory_prior=prior, free_start=False, excitation=excitation)
+    warm = fit_role(series, count, memory_prior=prior, free_start=True, excitation=excitation)
+    # A flat population may be one that settles at once or one that started settled. The nearly
+    # cold start is the default; a warm one must fit better by far.
+    if fit.chi_square - warm.chi_square > START_RANGE**2:
+        fit, basis = warm, f"{basis}; with a leaked population at round 0"
     levels, memories = fit.draws(settings.draws, rng)
     full_levels = np.full((settings.draws, len(names)), np.nan)
     full_memories = full_levels.copy()
