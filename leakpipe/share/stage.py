@@ -25,7 +25,7 @@ from leakpipe.share.exposures import (
 )
 from leakpipe.share.regression import Regression, Shots, fit, split_closing
 from leakpipe.share.routes import CAUTION, MODEL_ERROR, Route, combine
-from leakpipe.share.twin import run_twin
+from leakpipe.share.twin import Observed, run_twin
 
 __all__ = ["ExposureSums", "merge", "partial", "share"]
 
@@ -287,9 +287,9 @@ def _twin(
 ) -> tuple[Route | None, str]:
     """Follow the twin."""
     frame = used[0][0]
-    observed = _interior_probability(detection)
-    if not np.all(np.isfinite(observed)):
-        return None, "no interior rounds to set the twin's detection probability to"
+    observed = Observed(_interior_probability(detection), _successive(detection))
+    if not np.all(np.isfinite([observed.detection, observed.successive])):
+        return None, "too few interior rounds to set the twin's ordinary errors by"
     durations = np.unique([one.rounds for one, _, _ in used])
     picks = durations[np.unique(np.linspace(0, len(durations) - 1, TWIN_DURATIONS).astype(int))]
     twin = run_twin(
@@ -326,6 +326,20 @@ def _interior_probability(detection: xr.Dataset) -> FloatArray:
         events[row, outside] = trials[row, outside] = 0.0
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.asarray(events.sum(axis=(0, 1)) / trials.sum(axis=(0, 1)))
+
+
+def _successive(detection: xr.Dataset) -> FloatArray:
+    """Return the covariance of each check's events in successive interior layers, (check,)."""
+    same = np.flatnonzero(detection["early"].values == detection["late"].values)
+    block = float(detection.attrs["block"])
+    pooled = detection[["products", "block_products"]].isel(pair=same, lag=1).sum("batch")
+    blocks = detection["blocks"].values.sum(axis=0).astype(float)
+    # A product at layer r needs r + 1 interior too: the blocks of the later layer.
+    behind = np.append(blocks[1:], 0.0)
+    behind[0] = 0.0
+    excess = pooled["products"].values - pooled["block_products"].values / block
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray(excess.sum(axis=1) / ((block - 1) * behind.sum()))
 
 
 def _practice(logical: xr.Dataset, rates: xr.Dataset) -> list[Finding]:

@@ -1,8 +1,9 @@
 """The twin: the fitted device simulated with and without injection, decoded alike.
 
-The twin has the fitted injection (per gate) and seepage of every qubit, ordinary gate and readout
-errors at the trade's usual ratios, and one common factor on them that makes its mean detection
-probability the observed one; each check's remainder goes into its readout error. What a leaked
+The twin has the fitted injection (per gate) and seepage of every qubit. Its ordinary errors are set
+by what the detection events show: each check's readout error by the correlation of its events in
+successive rounds (a wrong reading makes two), one common factor on gate and idling errors by the
+mean detection probability. What a leaked
 partner does to a qubit is not known from the data alone, so both published pictures are simulated:
 a phase-type flip with probability 1/2, and full depolarisation. Their spread is the twin's model
 error. Its own simulator, not the estimator's formulas, says what leakage costs; it is a cross-check
@@ -28,8 +29,8 @@ FloatArray = NDArray[np.float64]
 
 ORDINARY = MemoryNoise(single_qubit=1e-3, two_qubit=6e-3, idle=2e-3, measurement=2e-2)
 """Usual error levels (common practice, no source); a common factor is fitted."""
-MATCH_STEPS = 5
-MATCH_SHOTS = 4000
+MATCH_STEPS = 6
+MATCH_SHOTS = 8192
 MATCH_ROUNDS = 12
 LEAST_ERROR = 1e-4
 CONSEQUENCES = (0.0, 1.0)
@@ -83,23 +84,51 @@ def device(
     return replace(ORDINARY, injection=per_gate, seepage=s, depolarise=depolarise)
 
 
+@dataclass(frozen=True)
+class Observed:
+    """What the twin's ordinary errors are set to.
+
+    Attributes
+    ----------
+    detection
+        (check,) detection probability over interior rounds.
+    successive
+        (check,) covariance of a check's events in successive interior rounds.
+    """
+
+    detection: FloatArray
+    successive: FloatArray
+
+    @property
+    def reading(self) -> FloatArray:
+        """(check,) probability of what flips one value of a check and not the next.
+
+        1 - 2 d multiplies over independent causes; the exclusive or of two successive events
+        misses what flips the value between them, so (1 - 2 d)^2 / (1 - 2 d_xor) = (1 - 2 q)^2.
+        """
+        d = self.detection
+        either = 2 * (d - self.successive - d**2)
+        ratio = (1 - 2 * d) ** 2 / np.maximum(1 - 2 * either, 1e-6)
+        return np.asarray((1 - np.sqrt(np.clip(ratio, 0.0, 1.0))) / 2)
+
+
 def match_detection(
     noise: MemoryNoise,
     layout: Layout,
     basis: Basis,
-    observed: FloatArray,
+    observed: Observed,
     rng: np.random.Generator,
     *,
     reset: bool,
 ) -> tuple[MemoryNoise, float]:
-    """Scale ordinary errors until each check fires as often as observed.
+    """Set readout errors and the factor on other errors until events look as observed.
 
     Parameters
     ----------
     noise
         Noise with leakage.
     observed
-        (check,) detection probability over interior rounds.
+        Detection probability and successive covariance of each check.
     rng
         Randomness.
     reset
@@ -108,27 +137,36 @@ def match_detection(
     Returns
     -------
     noise, detection
-        Scaled noise and its mean detection probability.
+        Noise, and the twin's mean detection probability.
     """
-    factor, flips = 1.0, np.full(len(layout.data) + len(layout.measure), 2e-2)
-    mean = 0.0
     data = len(layout.data)
-    for step in range(MATCH_STEPS):
+    factor, flips = 1.0, np.full(data + len(layout.measure), 2e-2)
+    mean = 0.0
+    for _ in range(MATCH_STEPS):
         now = _scaled(noise, factor, flips)
         shots = simulate(layout, basis, MATCH_ROUNDS, MATCH_SHOTS, now, rng, reset=reset)
-        events = _events(shots, layout, basis, reset)
-        found = events[:, 1:MATCH_ROUNDS].mean(axis=(0, 1))
-        mean = float(found.mean())
-        # ln(1 - 2 d) is about linear in the error probabilities.
-        ratio = np.log(1 - 2 * observed) / np.log(1 - 2 * np.minimum(found, 0.49))
-        if step < MATCH_STEPS - 2:
-            factor *= float(np.clip(np.mean(ratio), 0.3, 3.0))
-            flips *= float(np.clip(np.mean(ratio), 0.3, 3.0))
-        else:
-            # Two readings enter an event, each flip counts twice in ln(1 - 2 d) / -2.
-            gap = (np.log(1 - 2 * found) - np.log(1 - 2 * observed)) / 4
-            flips[data:] = np.clip(flips[data:] + gap, LEAST_ERROR, 0.3)
+        found = _observe(_events(shots, layout, basis, reset)[:, 1:MATCH_ROUNDS])
+        mean = float(found.detection.mean())
+        change = observed.reading - found.reading
+        flips[data:] = np.clip(flips[data:] + change, LEAST_ERROR, 0.3)
+        flips[:data] = flips[data:].mean()
+        # -ln(1 - 2 d) / 2 adds over causes; the reading's part is -ln(1 - 2 q).
+        wanted = _other(observed.detection, observed.reading)
+        factor *= float(np.clip(wanted / max(_other(found.detection, found.reading), 1e-6), 0.3, 3))
     return _scaled(noise, factor, flips), mean
+
+
+def _other(detection: FloatArray, reading: FloatArray) -> float:
+    """Return the mean of what makes events other than wrong readings."""
+    total = -np.log(1 - 2 * np.minimum(detection, 0.49)) / 2
+    return float(np.mean(np.maximum(total + np.log(1 - 2 * np.minimum(reading, 0.49)), 1e-5)))
+
+
+def _observe(events: NDArray[np.uint8]) -> Observed:
+    """Return means and successive covariances of interior events (shot, layer, check)."""
+    both = (events[:, :-1] & events[:, 1:]).mean(axis=(0, 1))
+    early, late = events[:, :-1].mean(axis=(0, 1)), events[:, 1:].mean(axis=(0, 1))
+    return Observed(events.mean(axis=(0, 1)), both - early * late)
 
 
 def _scaled(noise: MemoryNoise, factor: float, flips: FloatArray) -> MemoryNoise:
@@ -147,7 +185,7 @@ def run_twin(
     rounds: Sequence[int],
     injection: FloatArray,
     seepage: FloatArray,
-    observed: FloatArray,
+    observed: Observed,
     shots: int,
     rng: np.random.Generator,
     *,
@@ -164,7 +202,7 @@ def run_twin(
     injection, seepage
         (data + measure,) fitted rates per round.
     observed
-        (check,) detection probability over interior rounds.
+        What the ordinary errors are set to.
     shots
         Per number of rounds.
     rng
@@ -178,23 +216,27 @@ def run_twin(
         None where the logical error of the twin is not determined.
     """
     fits, variances, mean = [], [], 0.0
+    axis = np.array(rounds, dtype=float)
     for depolarise in CONSEQUENCES:
         noise = device(layout, injection, seepage, depolarise=depolarise)
         noise, mean = match_detection(noise, layout, basis, observed, rng, reset=reset)
+        seed = int(rng.integers(2**63))
         pair = []
         for one in (noise, noise.without_injection()):
-            errors = [_logical_error(layout, basis, r, shots, one, rng, reset) for r in rounds]
-            p = np.array(errors)
-            guess = (p * shots + 1) / (shots + 2)
-            fit = fit_per_round(
-                np.array(rounds, dtype=float), 1 - 2 * p, 4 * guess * (1 - guess) / shots
+            # The same seed gives both the same ordinary errors: their difference is leakage's.
+            stream = np.random.default_rng(seed)
+            p = np.array(
+                [_logical_error(layout, basis, r, shots, one, stream, reset) for r in rounds]
             )
+            guess = (p * shots + 1) / (shots + 2)
+            fit = fit_per_round(axis, 1 - 2 * p, 4 * guess * (1 - guess) / shots)
             if fit is None:
                 return None
             pair.append(fit)
         fits.append([fit.error_per_round for fit in pair])
         relative = [fit.error / fit.error_per_round for fit in pair]
         ratio = pair[1].error_per_round / pair[0].error_per_round
+        # An upper bound: common errors cancel in the ratio.
         variances.append((ratio * np.hypot(*relative)) ** 2)
     per_round = np.array(fits)
     shares = 1 - per_round[:, 1] / per_round[:, 0]
@@ -203,7 +245,7 @@ def run_twin(
         statistical=float(np.sqrt(np.mean(variances) / len(CONSEQUENCES))),
         spread=float(abs(shares[1] - shares[0]) / 2),
         per_round=per_round,
-        detection=(mean, float(observed.mean())),
+        detection=(mean, float(observed.detection.mean())),
     )
 
 
