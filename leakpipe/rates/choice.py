@@ -28,11 +28,13 @@ from leakpipe.rates.sandwich import Sandwich
 FloatArray = NDArray[np.float64]
 Shape = Literal["no data", "flat", "line", "one exponential", "two exponentials"]
 
+Course = Literal["no data", "no rise", "goes on", "over early", "unclear"]
+
 FIRST_ROUNDS = (1, 3, 6)
 """First fitted interior layers, counted from 1, of the scan (prototype study of the rates)."""
 TRANSIENT = 0.5
-"""A later rise surely below this part of what the whole curve predicts is a transient (ours: half
-way between leakage, 1, and a boundary effect, 0)."""
+"""A later rise surely below this part of what the whole curve predicts is over (ours: half way
+between leakage, 1, and a boundary effect, 0)."""
 
 
 @dataclass(frozen=True)
@@ -109,58 +111,62 @@ class StartScan:
     fits
         Their rises.
     later_part, later_error
-        (s,) rise after `first` in parts of what the whole curve predicts there, and its sandwich
-        error; 1 and NaN for the whole curve.
-    transient
-        Whether a later part is surely below a half: the rise is over after the first rounds.
-    checkable
-        Whether the later data could have said so.
+        (s - 1,) rise from the later starts on, in parts of what the whole curve predicts there, and
+        its sandwich error.
+    course
+        "goes on": the later rounds still rise. "over early": they do not, although the whole curve
+        predicts it or because it puts most of the rise before them; then detection probabilities
+        alone cannot tell leakage that settles so fast from a transient of the first rounds.
+        "unclear": the later rounds are too noisy. "no rise", "no data": as the whole curve.
     """
 
     first: FloatArray
     fits: tuple[RiseFit, ...]
     later_part: FloatArray
     later_error: FloatArray
-    transient: bool
-    checkable: bool
+    course: Course
 
 
 def scan_starts(
     rounds: FloatArray, probability: FloatArray, variance: FloatArray, deviations: FloatArray
 ) -> StartScan:
-    """Fit a curve from its first, third and sixth round on and compare the later rise with the
-    prediction of the whole; arguments as `fit_rise`.
+    """Fit a curve from its first, third and sixth round on; arguments as `fit_rise`.
+
+    The later rise is compared with the prediction of the whole curve.
     """
-    fits: list[RiseFit] = []
-    firsts, parts, errors = [], [], []
-    for number in FIRST_ROUNDS:
+    whole = fit_rise(rounds, probability, variance, deviations)
+    fits, firsts, parts = [whole], [float(rounds[0]) if len(rounds) else np.nan], []
+    for number in FIRST_ROUNDS[1:]:
         later = slice(number - 1, None)
-        if len(rounds[later]) < FEWEST_ROUNDS and fits:
-            continue
-        fits.append(
-            fit_rise(rounds[later], probability[later], variance[later], deviations[:, later])
-        )
-        whole = fits[0]
-        if whole.status == "no data":
+        if whole.status == "no data" or len(rounds[later]) < FEWEST_ROUNDS:
             break
+        one = (rounds[later], probability[later], variance[later], deviations[:, later])
+        fits.append(fit_rise(*one))
         firsts.append(float(rounds[later][0]))
-        if number == FIRST_ROUNDS[0]:
-            parts.append(1.0)
-            errors.append(float("nan"))
-            continue
-        part, error = _part_of(
-            whole.curve(rounds[later]), probability[later], variance[later], deviations[:, later]
-        )
-        parts.append(part)
-        errors.append(error)
-    part_array, error_array = np.array(parts), np.array(errors)
+        parts.append(_part_of(whole.curve(one[0]), *one[1:]))
+    table, first = np.array(parts).reshape(-1, 2), np.array(firsts)
     freedom = Sandwich(1 / variance, deviations).freedom
-    width = float(t.ppf(0.975, freedom)) * error_array[1:]
-    rises = bool(fits) and fits[0].status in ("short", "long", "settled")
-    # What would say so: a leakage-like later rise of 1 would stay above a half with its interval.
-    checkable = rises and bool(np.any(1 - width > TRANSIENT))
-    transient = rises and bool(np.any(part_array[1:] + width < TRANSIENT))
-    return StartScan(np.array(firsts), tuple(fits), part_array, error_array, transient, checkable)
+    width = float(t.ppf(0.975, freedom)) * table[:, 1]
+    course = _course(fits, first, table[:, 0], width)
+    return StartScan(first, tuple(fits), table[:, 0], table[:, 1], course)
+
+
+def _course(fits: list[RiseFit], first: FloatArray, part: FloatArray, width: FloatArray) -> Course:
+    """Return the word for what the rise does after the first rounds."""
+    whole = fits[0]
+    if whole.status == "no data":
+        return "no data"
+    if whole.status in ("no rise", "falling"):
+        return "no rise"
+    if np.any(part + width < TRANSIENT):
+        return "over early"
+    if np.any(part - width > 0):
+        return "goes on"
+    if len(fits) > 1 and fits[1].status in ("no rise", "falling"):
+        remaining = np.exp(-(first[1] - first[0]) / whole.tau)
+        if remaining < TRANSIENT:
+            return "over early"
+    return "unclear"
 
 
 def _part_of(
