@@ -24,16 +24,17 @@ from leakpipe.history.publish import store_of
 from leakpipe.logical.stage import logical
 from leakpipe.progress import Reporter, Silent
 from leakpipe.rates.stage import rates
-from leakpipe.readout.stage import calibrate, readout
+from leakpipe.readout.stage import readout
 from leakpipe.recordings.finding import Epoch, find, layout_of, usable
-from leakpipe.recordings.opening import MemoryRecording, content_hash, open_calibration
-from leakpipe.reduction import Reduced, reduce_all
+from leakpipe.recordings.opening import MemoryRecording, open_calibration
+from leakpipe.reduction import Reduced
 from leakpipe.report.figures import write_figures
 from leakpipe.report.inputs import PatchReport
 from leakpipe.report.page import page
 from leakpipe.report.run_log import json_line, run_log_block
 from leakpipe.report.summary import summary
 from leakpipe.result import PatchResult, folder_name, replacing, write_numbers
+from leakpipe.reuse import MOST_BYTES, cache_of, calibrated, hash_of, reduce_kept
 from leakpipe.share.stage import share
 
 if TYPE_CHECKING:
@@ -156,19 +157,19 @@ def run_patch(
     reporter = reporter or Silent()
     label = f"{epoch.calibration_id} {patch}"
     with reporter.step(f"{label}: calibrating readout"):
-        calibrations = [open_calibration(one.path) for one in epoch.calibrations]
-        model = calibrate(calibrations, config.readout, config.seed)
+        model, model_key = calibrated([one.path for one in epoch.calibrations], config)
     memories = [one for one in epoch.memories if one.patch == patch]
     reports = []
     for basis, group in groupby(memories, key=lambda one: one.frame.basis):
         recordings = list(group)
         with reporter.step(f"{label} {basis}: reading shots", len(recordings)) as step:
-            reduced = reduce_all(recordings, model, config, step)
+            reduced = reduce_kept(recordings, model, model_key, config, step)
         done: dict[str, xr.Dataset] = {}
         for name, stage in STAGES:
             with reporter.step(f"{label} {basis}: {name}"):
                 done[name] = stage(Material(model, reduced, config, done))
-        reports.append(_report(epoch, recordings, done, model, calibrations[-1], config))
+        newest = open_calibration(epoch.calibrations[-1].path)
+        reports.append(_report(epoch, recordings, done, model, newest, config))
     return reports
 
 
@@ -196,7 +197,7 @@ def _report(
         layout=frame.layout,
         stages={"model": model, **done},
         config_text=config_text(config),
-        input_hashes={path.name: content_hash(path) for path in inputs},
+        input_hashes={path.name: hash_of(path) for path in inputs},
         versions={"leakpipe": __version__, **_versions()},
         seed=config.seed,
         points=_cloud(calibration),
@@ -260,9 +261,10 @@ def write_result(
 
 
 def close_pass(config: Config) -> None:
-    """End a pass of refits: write the page over all epochs."""
+    """End a pass of refits: write the page over all epochs, keep the cache within its size."""
     neighbours = neighbours_of(layout_of(config))
     write_epochs_page(config.results, store_of(config.results), neighbours, config.history)
+    cache_of(config).trim(MOST_BYTES)
 
 
 def run_job(

@@ -101,15 +101,16 @@ def reduce_all(
 ) -> list[Reduced]:
     """Reduce recordings here, in a process pool or on a cluster, in the order given."""
     reduced = []
-    for one in _mapped(recordings, model, config):
+    for one in reduce_each(recordings, model, config):
         step.advance()
         reduced.append(one)
     return reduced
 
 
-def _mapped(
+def reduce_each(
     recordings: Sequence[MemoryRecording], model: xr.Dataset, config: Config
 ) -> Iterator[Reduced]:
+    """Yield the reduced recordings in the order given, each as soon as it is there."""
     if config.compute.scheduler is not None:
         from distributed import Client
 

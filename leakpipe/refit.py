@@ -1,9 +1,9 @@
 """Refits: which results are new or stale, made one after the other, safely at any moment.
 
 Identity is content: the hashes of the recordings a result rests on, the resolved settings, the
-layout and `RESULT_VERSION`. A result folder carries its identity and is renamed into place when it
-is whole; run log, history and metrics follow and can be written again without doubling anything.
-So a kill loses at most the result that was being made, and the next start makes it again.
+layout and the version of results. A result folder carries its identity and is renamed into place
+when it is whole; run log, history and metrics follow and can be written again without doubling
+anything. So a kill loses at most the result that was being made, and the next start makes it again.
 
 Nothing numerical is imported unless there is something to do.
 """
@@ -24,6 +24,7 @@ from leakpipe.history.inputs import Inputs, Ledger, content_hash, digest_of, loo
 from leakpipe.history.jobs import Job, Pass, Plan, Planner, Runner, Tools
 from leakpipe.history.publish import publish, store_of, unpublished, write_metrics
 from leakpipe.history.results import (
+    RESULT_VERSION,
     Finished,
     Key,
     clear_leftovers,
@@ -53,8 +54,6 @@ __all__ = [
     "stop_on_signals",
 ]
 
-RESULT_VERSION = 1
-"""Raised by hand when a change of leakpipe changes numbers: every result is then stale."""
 MOST_TRIES = 3
 """Tries of a result that fails unexpectedly before it is left until something changes (ours)."""
 NOT_IN_RESULTS = ("history", "compute", "results", "run_log", "metrics")

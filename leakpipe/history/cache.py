@@ -1,7 +1,7 @@
 """A folder of arrays under keys made from content: readout models, sums of a recording.
 
-Entries are netCDF files or NPZ archives, never pickles. A damaged entry is a miss; a write is whole
-or not at all, so two processes may share the folder.
+Entries are NPZ archives, never pickles. A damaged entry is a miss; a write is whole or not at all,
+so two processes may share the folder.
 """
 
 from __future__ import annotations
@@ -14,14 +14,12 @@ import zipfile
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-if TYPE_CHECKING:
-    import xarray as xr
-
+SUFFIX = ".npz"
 _ATTRIBUTES = "attributes"
 _KEY = re.compile(r"[A-Za-z0-9_-]{8,128}")
 
@@ -48,7 +46,7 @@ class Cache:
 
     def get(self, key: str) -> Entry | None:
         """Return an entry of arrays, or None if there is none or it is damaged."""
-        path = self._path(key, ".npz")
+        path = self._path(key)
         try:
             with np.load(path, allow_pickle=False) as archive:
                 arrays = {name: archive[name] for name in archive.files if name != _ATTRIBUTES}
@@ -73,30 +71,21 @@ class Cache:
                 raise ValueError(f"array {name!r} cannot be kept: objects, or a reserved name")
         text = json.dumps(attributes)
         named: dict[str, Any] = {**arrays, _ATTRIBUTES: np.array(text)}
-        self._write(self._path(key, ".npz"), lambda path: _save(path, named))
-
-    def get_dataset(self, key: str) -> xr.Dataset | None:
-        """Return a dataset, read into memory, or None if there is none or it is damaged."""
-        import xarray as xr
-
-        path = self._path(key, ".nc")
-        if not path.exists():
-            return None
+        path = self._path(key)
+        self.folder.mkdir(parents=True, exist_ok=True)
+        fresh = self.folder / f".{path.name}.{uuid.uuid4().hex[:8]}.new"
         try:
-            with xr.open_dataset(path, engine="netcdf4") as opened:
-                found = opened.load()
-        except (OSError, ValueError, RuntimeError):
-            return None
-        self._touch(path)
-        return found
-
-    def put_dataset(self, key: str, dataset: xr.Dataset) -> None:
-        """Write a dataset."""
-        self._write(self._path(key, ".nc"), lambda path: dataset.to_netcdf(path, engine="netcdf4"))
+            _save(fresh, named)
+            fresh.replace(path)
+        finally:
+            fresh.unlink(missing_ok=True)
 
     def trim(self, most_bytes: int) -> int:
-        """Remove the entries unused for longest until the folder fits; return how many."""
-        entries = [path for path in self.folder.glob("*") if path.suffix in (".npz", ".nc")]
+        """Remove the entries unused for longest until the folder fits; return how many.
+
+        What killed writers left behind counts as an entry.
+        """
+        entries = [path for path in self.folder.glob("*") if path.suffix in (SUFFIX, ".new")]
         status = sorted(((path.stat(), path) for path in entries), key=lambda p: p[0].st_mtime_ns)
         size = sum(one.st_size for one, _ in status)
         removed = 0
@@ -108,10 +97,10 @@ class Cache:
             removed += 1
         return removed
 
-    def _path(self, key: str, suffix: str) -> Path:
+    def _path(self, key: str) -> Path:
         if not _KEY.fullmatch(key):
             raise ValueError(f"key {key!r} must be 8 to 128 letters, digits, - or _")
-        return self.folder / f"{key}{suffix}"
+        return self.folder / f"{key}{SUFFIX}"
 
     def _touch(self, path: Path) -> None:
         try:
@@ -119,15 +108,6 @@ class Cache:
         except OSError:
             # A read-only cache is still a cache.
             return
-
-    def _write(self, path: Path, write: Any) -> None:
-        self.folder.mkdir(parents=True, exist_ok=True)
-        fresh = self.folder / f".{path.name}.{uuid.uuid4().hex[:8]}.new"
-        try:
-            write(fresh)
-            fresh.replace(path)
-        finally:
-            fresh.unlink(missing_ok=True)
 
 
 def _save(path: Path, named: Mapping[str, Any]) -> None:

@@ -13,6 +13,8 @@ from typing import Any
 
 from leakpipe.history.files import write_whole
 
+RESULT_VERSION = 1
+"""Raised by hand when a change of leakpipe changes numbers: every result is then stale."""
 IDENTITY_NAME = "identity.json"
 SUMMARY_NAME = "summary.json"
 _LEFTOVER = re.compile(r"\.(?P<place>.+)\.(?P<kind>old|new)-[0-9a-f]{8}")

@@ -6,7 +6,6 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-import xarray as xr
 
 from leakpipe.history.cache import Cache
 
@@ -32,29 +31,14 @@ def test_arrays_come_back_bit_for_bit(tmp_path: Path) -> None:
     assert cache.get("another-key") is None
 
 
-def test_datasets_come_back(tmp_path: Path) -> None:
-    """A readout model is kept with its names and attributes."""
-    cache = Cache(tmp_path)
-    dataset = xr.Dataset({"means": (("qubit", "state"), np.eye(3))}, {"qubit": list("abc")})
-    dataset.attrs["seed"] = 4
-    cache.put_dataset(KEY, dataset)
-    found = cache.get_dataset(KEY)
-    assert found is not None
-    xr.testing.assert_identical(found, dataset)
-    assert cache.get_dataset("another-key") is None
-
-
 @pytest.mark.parametrize("keep", [0, 10, 200, -1])
 def test_a_damaged_entry_is_a_miss(tmp_path: Path, keep: int) -> None:
     """Cut at any place, an entry is as good as absent, and can be written again."""
     cache = Cache(tmp_path)
-    dataset = xr.Dataset({"x": ("i", np.arange(4000.0))})
     cache.put(KEY, {"x": np.arange(4000.0)}, {})
-    cache.put_dataset(KEY, dataset)
     for path in tmp_path.iterdir():
         path.write_bytes(path.read_bytes()[:keep])
     assert cache.get(KEY) is None
-    assert cache.get_dataset(KEY) is None
     cache.put(KEY, {"x": np.arange(3.0)}, {})
     assert cache.get(KEY) is not None
 
