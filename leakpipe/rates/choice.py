@@ -136,22 +136,29 @@ def scan_starts(
     """
     whole = fit_rise(rounds, probability, variance, deviations)
     fits, firsts, parts = [whole], [float(rounds[0]) if len(rounds) else np.nan], []
+    later_limit = np.inf
     for number in FIRST_ROUNDS[1:]:
         later = slice(number - 1, None)
         if whole.status == "no data" or len(rounds[later]) < FEWEST_ROUNDS:
             break
         one = (rounds[later], probability[later], variance[later], deviations[:, later])
         fits.append(fit_rise(*one))
-        firsts.append(float(rounds[later][0]))
+        firsts.append(float(one[0][0]))
         parts.append(_part_of(whole.curve(one[0]), *one[1:]))
+        if number == FIRST_ROUNDS[1]:
+            # Counted from its own first round, the amplitude is the rise that is still to come.
+            critical = critical_values(one[0], FREEDOM)
+            later_limit = fit_rise(one[0] - firsts[-1], *one[1:], critical).amplitude_limit
     table, first = np.array(parts).reshape(-1, 2), np.array(firsts)
     freedom = Sandwich(1 / variance, deviations).freedom
     width = float(t.ppf(0.975, freedom)) * table[:, 1]
-    course = _course(fits, first, table[:, 0], width)
+    course = _course(fits, first, table[:, 0], width, later_limit)
     return StartScan(first, tuple(fits), table[:, 0], table[:, 1], course)
 
 
-def _course(fits: list[RiseFit], first: FloatArray, part: FloatArray, width: FloatArray) -> Course:
+def _course(
+    fits: list[RiseFit], first: FloatArray, part: FloatArray, width: FloatArray, limit: float
+) -> Course:
     """Return the word for what the rise does after the first rounds."""
     whole = fits[0]
     if whole.status == "no data":
@@ -162,11 +169,10 @@ def _course(fits: list[RiseFit], first: FloatArray, part: FloatArray, width: Flo
         return "over early"
     if np.any(part - width > 0):
         return "goes on"
-    if len(fits) > 1 and fits[1].status in ("no rise", "falling"):
-        remaining = np.exp(-(first[1] - first[0]) / whole.tau)
-        if remaining < TRANSIENT:
-            return "over early"
-    return "unclear"
+    # The whole curve may itself say that the rise is over by then; believed only if the later
+    # rounds could have shown it.
+    seen = whole.level - float(whole.curve(first[:1])[0])
+    return "over early" if limit < TRANSIENT * seen else "unclear"
 
 
 def _part_of(
