@@ -98,8 +98,8 @@ def store(
     *,
     units: str = "1",
     long_name: str = "",
-) -> dict[Hashable, tuple[Sequence[str], Any, dict[str, str | float]]]:
-    """Return the variables that hold an array of estimates in a dataset.
+) -> dict[str, Any]:
+    """Return the variables that hold an array of estimates, ready for `xarray.Dataset`.
 
     Parameters
     ----------

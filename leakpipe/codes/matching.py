@@ -96,8 +96,8 @@ def _faults(
         # both.
         for data, checks in (({qubit}, set()), (set(), {check}), ({qubit}, {check})):
             yield *outcome(position, data, checks), 4 / 15 * rates.two_qubit
-    for check in np.flatnonzero(own):
-        yield ((0, int(check)), (1, int(check))), False, rates.measurement
+    for check in np.flatnonzero(own).tolist():
+        yield ((0, check), (1, check)), False, rates.measurement
 
 
 def _gates(layout: Layout, basis: Basis) -> list[tuple[bool, int, int]]:

@@ -121,7 +121,8 @@ def _start(rounds: FloatArray, fidelity: FloatArray, variance: FloatArray) -> Fl
     weight = fidelity[keep] / np.sqrt(variance[keep])
     design = np.column_stack([np.ones(keep.sum()), rounds[keep]])
     target = np.log(fidelity[keep])
-    return np.linalg.lstsq(design * weight[:, None], target * weight, rcond=None)[0]
+    solution = np.linalg.lstsq(design * weight[:, None], target * weight, rcond=None)[0]
+    return np.asarray(solution, dtype=np.float64)
 
 
 def _gauss_newton(

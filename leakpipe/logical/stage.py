@@ -198,7 +198,8 @@ def _amplitude(fit: PerRound | None, basis: str) -> Estimate:
 def _curve_error(fit: PerRound, rounds: NDArray[np.float64]) -> NDArray[np.float64]:
     value = fit.fidelity(rounds)
     slope = np.stack([-2 * rounds / (1 - 2 * fit.error_per_round), np.ones_like(rounds)]) * value
-    return np.sqrt(np.einsum("ai,ab,bi->i", slope, fit.covariance, slope))
+    variance = np.einsum("ai,ab,bi->i", slope, fit.covariance, slope)
+    return np.asarray(np.sqrt(variance))
 
 
 def _findings(

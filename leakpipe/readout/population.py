@@ -81,7 +81,7 @@ def discriminant(
     norm = np.log(np.linalg.det(precision)) / 2 - features / 2 * np.log(2 * np.pi)
     return Discriminant(
         linear=linear,
-        precision=precision,
+        precision=np.asarray(precision, dtype=np.float64),
         centre=means[0].copy(),
         constant=float(np.log(prior[0]) + norm),
         background=float(np.log(prior[3] / box_volume)),

@@ -237,7 +237,7 @@ def run_twin(
         relative = [fit.error / fit.error_per_round for fit in pair]
         ratio = pair[1].error_per_round / pair[0].error_per_round
         # An upper bound: common errors cancel in the ratio.
-        variances.append((ratio * np.hypot(*relative)) ** 2)
+        variances.append(ratio**2 * sum(value**2 for value in relative))
     per_round = np.array(fits)
     shares = 1 - per_round[:, 1] / per_round[:, 0]
     return Twin(
