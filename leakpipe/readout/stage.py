@@ -486,7 +486,7 @@ def _pilot_points(
         flat = flat[:: max(len(flat) // CHECK_POINTS, 1)]
         points = integrate(flat, weights[column][None])[:, 0]
     points = points[np.isfinite(points).all(axis=1)]
-    return points.astype(np.float64)
+    return np.asarray(points, dtype=np.float64)
 
 
 def partial(tuned: Tuned, chunk: Chunk, frame: Frame) -> tuple[Readings, ReadoutSums]:
