@@ -9,5 +9,9 @@ class Section(BaseModel):
     """A part of the configuration. Field descriptions are shown in errors and the JSON Schema."""
 
     model_config = ConfigDict(
-        frozen=True, strict=True, extra="forbid", use_attribute_docstrings=True
+        frozen=True,
+        strict=True,
+        extra="forbid",
+        allow_inf_nan=False,
+        use_attribute_docstrings=True,
     )

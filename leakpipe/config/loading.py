@@ -153,6 +153,8 @@ def _say(model: type[BaseModel], path: tuple[str | int, ...], detail: ErrorDetai
             return f"must be a whole number, got {got}"
         case "float_type" | "float_parsing":
             return f"must be a number, got {got}"
+        case "finite_number":
+            return f"must be finite, got {got}"
         case "bool_type" | "bool_parsing":
             return f"must be true or false, got {got}"
         case "string_type" | "path_type":

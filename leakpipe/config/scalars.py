@@ -13,8 +13,26 @@ from typing import Any
 import yaml
 
 
+LONGEST_QUOTE = 40
+"""Characters of a value that an error repeats."""
+
+
 class Loader(yaml.SafeLoader):
     """Safe loader whose scalars follow the core schema of YAML 1.2 (yaml.org/spec/1.2.2, 10.3)."""
+
+    def construct_object(self, node: yaml.Node, deep: bool = False) -> Any:
+        """Return the value of a node; what Python cannot convert is an error with a place."""
+        try:
+            return super().construct_object(node, deep=deep)
+        except ValueError:
+            raise yaml.constructor.ConstructorError(
+                None, None, f"{_shortened(node.value)} is not of its type", node.start_mark
+            ) from None
+
+
+def _shortened(value: Any) -> str:
+    text = repr(value)
+    return text if len(text) <= LONGEST_QUOTE else f"{text[:LONGEST_QUOTE]}..."
 
 
 Loader.yaml_implicit_resolvers = {}
@@ -62,11 +80,14 @@ def compose(text: str) -> tuple[yaml.Node | None, Any]:
     ------
     yaml.YAMLError
         The text is no YAML, or a key stands twice; the error carries a mark where it can.
+        Also where the text is nested deeper than Python can follow.
     """
     loader = Loader(text)
     try:
         node = loader.get_single_node()
         return node, None if node is None else loader.construct_document(node)
+    except RecursionError:
+        raise yaml.YAMLError("nested too deeply") from None
     finally:
         loader.dispose()
 
