@@ -221,7 +221,7 @@ class _Refit:
                 break
             last = number == len(todo) - 1
             try:
-                self._make(job, inputs, self._told_to(job, plan, newest=last))
+                self._make(job, inputs, self._told_to(job, plan, inputs, newest=last))
             except Stopped:
                 self.told.stopped = True
                 break
@@ -282,31 +282,33 @@ class _Refit:
     def _relative(self, path: Path) -> str:
         return str(path.relative_to(self.config.recordings.folder))
 
-    def _told_to(self, job: Job, plan: Plan, *, newest: bool) -> list[Finding]:
-        """Return the findings about damaged recordings that this job's result has to carry.
+    def _told_to(self, job: Job, plan: Plan, inputs: Inputs, *, newest: bool) -> dict[Path, str]:
+        """Return the damaged recordings that this job's result has to tell of.
 
         A damaged recording does not say which epoch it is of. It is told to those whose
-        recordings lie in the same folder, or, where all lie together, to the newest one.
+        recordings lie in the same folder, or, where all lie together, once to the newest one.
         """
-        found = []
+        before = {sha for one in finished(self.results) if one.key != job.key for sha in one.told}
+        found = {}
         for path, sentence in plan.problems.items():
             beside = [one for one in plan.jobs if path.parent in {p.parent for p in one.inputs}]
             everywhere = len(beside) in (0, len(plan.jobs))
-            if newest if everywhere else job in beside:
-                found.append(_unreadable(path, sentence))
+            once = newest and inputs.hashes.get(path) not in before
+            if once if everywhere else job in beside:
+                found[path] = sentence
         return found
 
-    def _make(self, job: Job, inputs: Inputs, findings: list[Finding]) -> None:
+    def _make(self, job: Job, inputs: Inputs, left_out: dict[Path, str]) -> None:
         """Make one result, without the recordings that turn out damaged on the way."""
         while True:
             identity = self._identity(job, inputs)
             try:
-                folder = self._filled(job, identity, inputs, findings)
+                folder = self._filled(job, identity, inputs, left_out)
             except RecordingError as error:
                 damaged = [path for path in job.inputs if str(path) in str(error)]
                 for path in damaged:
                     self.ledger.bad[inputs.hashes[path]] = str(error)
-                    findings.append(_unreadable(path, str(error)))
+                    left_out[path] = str(error)
                 self.ledger.save(self.results)
                 again = [one for one in self._plan(inputs).jobs if one.key == job.key]
                 if damaged and again:
@@ -329,11 +331,12 @@ class _Refit:
         self.ledger.failures[identity] = (tries, text)
         self.ledger.save(self.results)
 
-    def _filled(self, job: Job, identity: str, inputs: Inputs, findings: Sequence[Finding]) -> Path:
+    def _filled(self, job: Job, identity: str, inputs: Inputs, left_out: dict[Path, str]) -> Path:
         from leakpipe.result import replacing
 
         taken = {one.folder: one.key for one in finished(self.results)}
         place = place_for(self.results, job.key, taken)
+        findings = [self._unreadable(path, text) for path, text in sorted(left_out.items())]
         with replacing(place) as folder:
             self.stop.working = True
             try:
@@ -346,7 +349,9 @@ class _Refit:
             if summary is None or key_of(summary) != job.key:
                 raise LeakpipeError(f"the result of {'-'.join(job.key)} has no summary of its own")
             hashes = {self._relative(path): inputs.hashes[path] for path in job.inputs}
-            note_identity(folder, job.key, identity, hashes, str(summary["made_at"]))
+            told = tuple(inputs.hashes[path] for path in left_out if path in inputs.hashes)
+            made_at = str(summary["made_at"])
+            note_identity(Finished(folder, job.key, identity, hashes, made_at, told))
         return place
 
     def _publish(self, folder: Path) -> None:
@@ -354,10 +359,12 @@ class _Refit:
         if summary is not None:
             publish(summary, self.store, self.config.run_log)
 
+    def _unreadable(self, path: Path, sentence: str) -> Finding:
+        from leakpipe.findings import Finding
 
-def _unreadable(path: Path, sentence: str) -> Finding:
-    from leakpipe.findings import Finding
-
-    numbers: dict[str, float | int | str | None] = {"recording": path.name}
-    said = f"{path.name} could not be used and was left out: {sentence}"
-    return Finding("recording-unreadable", "watch", path.name, said, numbers)
+        # A result names recordings by their place among the recordings, not on the machine.
+        plain = sentence.replace(f"{self.config.recordings.folder}/", "")
+        said = f"{path.name} could not be used and was left out: {plain}"
+        return Finding(
+            "recording-unreadable", "watch", path.name, said, {"recording": self._relative(path)}
+        )

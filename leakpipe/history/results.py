@@ -39,6 +39,8 @@ class Finished:
         Recording, relative to the folder of recordings, to the hash of its content.
     made_at
         When, as its summary says.
+    told
+        Hashes of the damaged recordings that its findings tell of.
     """
 
     folder: Path
@@ -46,6 +48,7 @@ class Finished:
     identity: str
     inputs: Mapping[str, str]
     made_at: str
+    told: tuple[str, ...] = ()
 
 
 def finished(results: Path) -> list[Finished]:
@@ -69,6 +72,7 @@ def finished(results: Path) -> list[Finished]:
                 str(noted.get("identity", "")),
                 dict(noted.get("inputs", {})),
                 str(noted["made_at"]),
+                tuple(noted.get("told", ())),
             )
         )
     return found
@@ -90,12 +94,16 @@ def read_summary(folder: Path) -> dict[str, Any] | None:
     return _read(folder / SUMMARY_NAME)
 
 
-def note_identity(
-    folder: Path, key: Key, identity: str, inputs: Mapping[str, str], made_at: str
-) -> None:
+def note_identity(of: Finished) -> None:
     """Write into a result folder what it was made from."""
-    content = {"key": key, "identity": identity, "inputs": dict(inputs), "made_at": made_at}
-    write_whole(folder / IDENTITY_NAME, json.dumps(content, indent=1).encode())
+    content = {
+        "key": of.key,
+        "identity": of.identity,
+        "inputs": dict(of.inputs),
+        "made_at": of.made_at,
+        "told": of.told,
+    }
+    write_whole(of.folder / IDENTITY_NAME, json.dumps(content, indent=1).encode())
 
 
 def place_for(results: Path, key: Key, taken: Mapping[Path, Key]) -> Path:

@@ -233,6 +233,11 @@ def test_a_corrupt_recording_becomes_a_finding_of_the_newest_result(season: Conf
     again = one_pass(season)
     assert again.made == []
     assert again.problems == told.problems
+    assert again.news() == ""
+    night(folder, 4)
+    assert [path.name for path in one_pass(season).made] == ["cal-004-west"]
+    assert state(season)["folders"]["cal-004-west"]["summary.json"]["findings"] == []
+    assert str(season.recordings.folder) not in finding["sentence"]
 
 
 def test_a_corrupt_recording_is_told_to_the_night_in_its_folder(tmp_path: Path) -> None:
