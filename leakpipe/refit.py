@@ -22,7 +22,7 @@ from leakpipe.errors import LeakpipeError, RecordingError
 from leakpipe.history.files import locked
 from leakpipe.history.inputs import Inputs, Ledger, content_hash, digest_of, look, recordings_in
 from leakpipe.history.jobs import Job, Pass, Plan, Planner, Runner, Tools
-from leakpipe.history.publish import publish, store_of, unpublished, write_metrics
+from leakpipe.history.publish import publish, set_aside, store_of, unpublished, write_metrics
 from leakpipe.history.results import (
     RESULT_VERSION,
     Finished,
@@ -188,6 +188,8 @@ class _Refit:
     def through(self) -> Pass:
         """Do the pass."""
         clear_leftovers(self.results)
+        if said := set_aside(self.store):
+            self.told.problems.append(said)
         for one in unpublished(finished(self.results), self.store):
             self._publish(one.folder)
         paths = recordings_in(self.config.recordings.folder, self.config.recordings.patterns)

@@ -11,12 +11,23 @@ from leakpipe.history.files import append_once, write_whole
 from leakpipe.history.metrics import metrics_text
 from leakpipe.history.results import Finished, read_summary
 from leakpipe.history.rows import in_utc
-from leakpipe.history.store import FILE_NAME, Store
+from leakpipe.history.store import FILE_NAME, HistoryDamaged, Store
 
 
 def store_of(results: Path) -> Store:
     """Return the history that lies beside the result folders."""
     return Store(results / FILE_NAME)
+
+
+def set_aside(store: Store) -> str | None:
+    """Move a damaged history away, so that it can be filled anew; say so, or return None."""
+    try:
+        store.made()
+    except HistoryDamaged:
+        aside = store.path.with_name(f"{store.path.name}.damaged")
+        store.path.replace(aside)
+        return f"{store.path}  was damaged: moved to {aside.name} and filled anew"
+    return None
 
 
 def unpublished(done: Iterable[Finished], store: Store) -> list[Finished]:

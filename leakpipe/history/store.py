@@ -95,6 +95,10 @@ class EpochLine:
     watch: int
 
 
+class HistoryDamaged(LeakpipeError):
+    """The file is no SQLite file, or a damaged one."""
+
+
 _ROW = tuple(field.name for field in fields(Row))
 _LINE = tuple(field.name for field in fields(EpochLine))
 
@@ -246,7 +250,9 @@ class Store:
                 _migrate(connection, self.path)
                 yield connection
             except sqlite3.DatabaseError as error:
-                raise LeakpipeError(
+                # The subclasses are about one statement, a lock or the disk, not about the file.
+                kind = HistoryDamaged if type(error) is sqlite3.DatabaseError else LeakpipeError
+                raise kind(
                     f"{self.path}  cannot be used as a history: {error}. "
                     "It is only an index: move it away and rebuild it from the result folders."
                 ) from error

@@ -315,6 +315,22 @@ def test_a_lost_history_or_run_log_line_is_written_again(season: Config) -> None
     assert state(season) == before
 
 
+def test_a_damaged_history_is_set_aside_and_filled_anew(season: Config) -> None:
+    """It is only an index: nobody has to get up for it."""
+    one_pass(season)
+    before = state(season)
+    history = season.results / "history.sqlite"
+    for damage in (b"no database" * 100, history.read_bytes()[:5000] + b"x" * 9000):
+        history.write_bytes(damage)
+        told = one_pass(season)
+        assert told.made == []
+        assert "filled anew" in told.problems[0]
+        aside = season.results / "history.sqlite.damaged"
+        assert aside.read_bytes() == damage
+        aside.unlink()
+        assert state(season) == before
+
+
 def test_an_empty_folder_and_a_night_without_data_are_no_errors(tmp_path: Path) -> None:
     """Nothing there yet: nothing to do."""
     (tmp_path / "recordings").mkdir()
