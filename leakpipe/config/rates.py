@@ -9,6 +9,21 @@ from pydantic import Field
 from leakpipe.config.base import Section
 
 
+class ParameterSettings(Section):
+    """What is said beforehand of one parameter of the joint model."""
+
+    value: float | None = None
+    """Starting value, or the value it is held at."""
+    vary: bool | None = None
+    """False holds the parameter at its value."""
+    min: float | None = None
+    """Lower bound."""
+    max: float | None = None
+    """Upper bound."""
+    expr: str | None = None
+    """Ties it to others, such as "injection_data"."""
+
+
 class RatesSettings(Section):
     """How injection and seepage are fitted."""
 
@@ -17,6 +32,19 @@ class RatesSettings(Section):
     observation: Literal["outcome random", "detector random"] = "outcome random"
     """What a leaked neighbour randomises: a check's outcome (circuits with reset), or its
     detection events."""
+    parameters: dict[
+        Literal[
+            "injection_data",
+            "seepage_data",
+            "injection_measure",
+            "seepage_measure",
+            "detection_start",
+            "detection_response",
+        ],
+        ParameterSettings,
+    ] = {}
+    """Parameters of the joint model that are fixed, bounded or tied. With any, the rates per role
+    come from the joint model; without, it is a cross-check of the fit per qubit."""
     draws: Annotated[int, Field(ge=100)] = 400
     """Random draws of the fitted rates that later stages carry as their errors."""
     readout_excitation: Annotated[float, Field(ge=0, lt=0.1)] = 5e-4

@@ -12,7 +12,6 @@ from typing import Any
 
 import yaml
 
-
 LONGEST_QUOTE = 40
 """Characters of a value that an error repeats."""
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
 
@@ -12,6 +12,8 @@ import numpy as np
 
 CONTRACT = "1"
 KINDS = ("iq", "trace", "state")
+FEW = 4
+"""Values of a long coordinate that a message repeats."""
 
 MEASURE_DIMS = {
     "iq": ("shot", "round", "measure", "quadrature"),
@@ -43,12 +45,15 @@ class Outline:
         Dimension name to length.
     coordinates
         Coordinate name to its values (small ones only).
+    numeric
+        Variable name to whether it holds numbers; variables left out are taken for numbers.
     """
 
     attributes: Mapping[str, Any]
     dims: Mapping[str, tuple[str, ...]]
     sizes: Mapping[str, int]
     coordinates: Mapping[str, np.ndarray[Any, Any]]
+    numeric: Mapping[str, bool] = field(default_factory=dict)
 
 
 def kind_of(outline: Outline, prefix: str = "") -> str | None:
@@ -69,7 +74,7 @@ def calibration_problems(outline: Outline) -> list[str]:
     if prepared is None:
         problems.append("coordinate prepared: not found, expected 0, 1 and, where there is one, 2")
     else:
-        values = [int(value) for value in prepared]
+        values = prepared.tolist()
         if not {0, 1} <= set(values) <= {0, 1, 2} or len(set(values)) != len(values):
             problems.append(f"coordinate prepared: found {values}, expected 0, 1 and perhaps 2")
     return problems + _size_problems(outline, ("qubit", "shot"))
@@ -99,6 +104,7 @@ def memory_problems(outline: Outline) -> list[str]:
         problems.append(
             f"variable prepared: found {_dims_text(prepared)}, expected (shot, data) or (data)"
         )
+    problems += _number_problems(outline, ("prepared", "verdict", "started_at"))
     for name in ("verdict", "started_at"):
         if name in outline.dims and outline.dims[name] != ("shot",):
             problems.append(
@@ -107,8 +113,8 @@ def memory_problems(outline: Outline) -> list[str]:
     problems += _name_problems(outline, "measure") + _name_problems(outline, "data")
     rounds = outline.coordinates.get("round")
     size = outline.sizes.get("round", 0)
-    if rounds is not None and list(rounds) != list(range(1, size + 1)):
-        problems.append(f"coordinate round: found {list(rounds)[:4]}..., expected 1 to {size}")
+    if rounds is not None and rounds.tolist() != list(range(1, size + 1)):
+        problems.append(f"coordinate round: found {_start_of(rounds)}, expected 1 to {size}")
     problems += _injected_problems(outline)
     return problems + _size_problems(outline, ("shot", "round", "measure", "data"))
 
@@ -163,9 +169,21 @@ def parse_time(text: object) -> datetime | None:
 
 def _dims_problems(outline: Outline, name: str, expected: tuple[str, ...]) -> list[str]:
     found = outline.dims[name]
+    problems = _number_problems(outline, (name,))
     if found == expected:
-        return []
-    return [f"variable {name}: found {_dims_text(found)}, expected {_dims_text(expected)}"]
+        return problems
+    return [
+        *problems,
+        f"variable {name}: found {_dims_text(found)}, expected {_dims_text(expected)}",
+    ]
+
+
+def _number_problems(outline: Outline, names: Sequence[str]) -> list[str]:
+    return [
+        f"variable {name}: found values of type text, expected numbers"
+        for name in names
+        if not outline.numeric.get(name, True)
+    ]
 
 
 def _quadrature_problems(outline: Outline) -> list[str]:
@@ -202,7 +220,37 @@ def _injected_problems(outline: Outline) -> list[str]:
         qubit = str(attributes["injected_qubit"])
         if qubit not in names:
             return [f'attribute injected_qubit: found "{qubit}", expected a qubit of the recording']
+        return _injected_number_problems(attributes, outline.sizes.get("round", 0))
     return []
+
+
+def _injected_number_problems(attributes: Mapping[str, Any], rounds: int) -> list[str]:
+    problems = []
+    at, probability = attributes["injected_round"], attributes.get("injected_probability", 1.0)
+    if _number(at) not in range(1, rounds + 1):
+        problems.append(
+            f"attribute injected_round: found {_quoted(at)}, expected a round from 1 to {rounds}"
+        )
+    value = _number(probability)
+    if value is None or not 0 <= value <= 1:
+        problems.append(
+            f"attribute injected_probability: found {_quoted(probability)}, expected a fraction "
+            "from 0 to 1"
+        )
+    return problems
+
+
+def _number(value: object) -> float | None:
+    try:
+        return float(str(value))
+    except ValueError:
+        return None
+
+
+def _start_of(values: np.ndarray[Any, Any]) -> str:
+    """Return the first few values as people write them."""
+    first = ", ".join(str(value) for value in values.tolist()[:FEW])
+    return f"[{first}{', ...' if len(values) > FEW else ''}]"
 
 
 def _size_problems(outline: Outline, dims: Sequence[str]) -> list[str]:

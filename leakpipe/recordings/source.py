@@ -17,6 +17,8 @@ from leakpipe.errors import RecordingError
 from leakpipe.recordings.contract import Outline
 
 SMALL = ("qubit", "prepared", "quadrature", "sample", "round", "measure", "data")
+NUMERIC = "iufb"
+"""Kinds of numpy types that readings may have; complex points are two quadratures here."""
 
 
 class Source(Protocol):
@@ -81,6 +83,10 @@ class _NetcdfSource:
                 for name in SMALL
                 if name in variables and variables[name].dimensions == (name,)
             },
+            numeric={
+                name: np.dtype(variable.dtype).kind in NUMERIC
+                for name, variable in variables.items()
+            },
         )
 
     def read(self, name: str, start: int = 0, stop: int | None = None) -> NDArray[Any]:
@@ -118,6 +124,10 @@ class _ZarrSource:
             },
             sizes={str(name): size for name, size in data.sizes.items()},
             coordinates={name: data[name].values for name in SMALL if name in data.coords},
+            numeric={
+                str(name): variable.dtype.kind in NUMERIC
+                for name, variable in data.variables.items()
+            },
         )
 
     def read(self, name: str, start: int = 0, stop: int | None = None) -> NDArray[Any]:
