@@ -29,6 +29,8 @@ OF_CODE = (
     ("settling_rounds", False),
 )
 """Quantities of the whole code, and whether its bases measure the same thing."""
+CHARTED = (QUBIT_LEAKAGE, *(quantity for quantity, _ in OF_CODE))
+"""All that `changes` looks at."""
 
 JUMP_SIGMA = 4.0
 """Errors that a jump from one epoch to the next must exceed: by chance once in 16 000 epochs of a

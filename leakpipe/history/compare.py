@@ -9,7 +9,7 @@ from typing import Any
 from leakpipe.codes.layout import Layout
 from leakpipe.config.history import HistorySettings
 from leakpipe.findings import Finding
-from leakpipe.history.changes import at_epoch, changes
+from leakpipe.history.changes import CHARTED, at_epoch, changes
 from leakpipe.history.chart import WARM_UP
 from leakpipe.history.limits import over_limits
 from leakpipe.history.rows import Row, rows_of
@@ -71,7 +71,8 @@ def limits_of(summary: Mapping[str, Any], settings: HistorySettings) -> list[Fin
 
 def _before(store: Store, summary: Mapping[str, Any], patches: set[str]) -> list[Row]:
     this = str(summary["calibration_id"])
-    rows = store.rows(device=str(summary["device"]), until=str(summary["acquired_at"]))
+    device, until = str(summary["device"]), str(summary["acquired_at"])
+    rows = store.rows(device=device, until=until, quantity=CHARTED)
     return [row for row in rows if row.patch in patches and row.calibration_id != this]
 
 

@@ -19,7 +19,7 @@ ROLE_QUANTITIES = ("steady_leakage", "injection", "seepage")
 QUBIT_QUANTITIES = (*ROLE_QUANTITIES, "settling_rounds", "assignment")
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, slots=True)
 class Row:
     """One quantity of one qubit, or of the whole code, in one epoch.
 

@@ -169,7 +169,7 @@ class Store:
         *,
         device: str | None = None,
         patch: str | None = None,
-        quantity: str | None = None,
+        quantity: str | tuple[str, ...] | None = None,
         qubit: str | None = None,
         until: str | None = None,
     ) -> list[Row]:
@@ -178,16 +178,17 @@ class Store:
         Parameters
         ----------
         device, patch, quantity, qubit
-            Only these; ``qubit=""`` is the whole code.
+            Only these; several quantities may be named; ``qubit=""`` is the whole code.
         until
             Only epochs recorded at this time (ISO 8601 with a zone) or before.
         """
         if not self.path.exists():
             return []
+        named = (quantity,) if isinstance(quantity, str) else quantity
         wanted = {
             "device = ?": device,
             "patch = ?": patch,
-            "quantity = ?": quantity,
+            "quantity IN (SELECT value FROM json_each(?))": named and json.dumps(named),
             "qubit = ?": qubit,
             "acquired_at <= ?": None if until is None else in_utc(until),
         }
@@ -199,9 +200,7 @@ class Store:
                 "ORDER BY acquired_at, calibration_id, device, patch, basis, position",
                 list(conditions.values()),
             )
-            made = [Row(**dict(zip(_ROW, row, strict=True))) for row in found]
-            # SQLite has no truth values.
-            return [replace(row, identifiable=bool(row.identifiable)) for row in made]
+            return [_row(values) for values in found]
 
     def epochs(self, *, device: str | None = None, patch: str | None = None) -> list[EpochLine]:
         """Return one line per device, calibration and patch, oldest first."""
@@ -256,6 +255,13 @@ class Store:
                     f"{self.path}  cannot be used as a history: {error}. "
                     "It is only an index: move it away and rebuild it from the result folders."
                 ) from error
+
+
+def _row(values: tuple[Any, ...]) -> Row:
+    named = dict(zip(_ROW, values, strict=True))
+    # SQLite has no truth values.
+    named["identifiable"] = bool(named["identifiable"])
+    return Row(**named)
 
 
 def summary_files(results: Path) -> list[Path]:
