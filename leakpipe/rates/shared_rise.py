@@ -200,20 +200,18 @@ def refit_rises(
     Weights stay those of the whole sample: they are nuisances, and common weights let all draws of
     a check be fitted at once.
     """
-    batches, checks, points = events.shape
-    number = np.zeros((len(picks), batches))
+    number = np.zeros((len(picks), len(events)))
     np.add.at(number, (np.arange(len(picks))[:, None], picks), 1.0)
-    fired = (number @ events.reshape(batches, -1)).reshape(-1, checks, points)
-    tried = (number @ trials.reshape(batches, -1)).reshape(-1, checks, points)
-    total = trials.sum(axis=0)
-    whole = events.sum(axis=0) / total
-    variance = np.maximum(whole * (1 - whole), 1 / total) / total
     grid = search_grid(float(rounds.max()))
-    # A sample without any shot of a round has no probability there: it keeps the whole's.
-    sampled = np.where(tried > 0, fired / np.maximum(tried, 1), whole)
-    fits = [
-        fit_curves(rounds, sampled[:, check], 1 / variance[check], grid) for check in range(checks)
-    ]
+    fits = []
+    for check in range(events.shape[1]):
+        total = trials[:, check].sum(axis=0)
+        whole = events[:, check].sum(axis=0) / total
+        variance = np.maximum(whole * (1 - whole), 1 / total) / total
+        tried = number @ trials[:, check]
+        # A sample without any shot of a round has no probability there: it keeps the whole's.
+        sampled = np.where(tried > 0, number @ events[:, check] / np.maximum(tried, 1), whole)
+        fits.append(fit_curves(rounds, sampled, 1 / variance, grid))
     return RiseDraws(
         *(
             np.stack([getattr(one, name) for one in fits], axis=1)

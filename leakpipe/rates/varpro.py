@@ -196,7 +196,7 @@ def fit_curves(
     weight
         (n,) inverse variances.
     grid
-        (g,) ascending ln tau.
+        (g,) ascending ln tau in equal steps.
     """
     sums = profile_sums(rounds, values, weight, grid)
     at = np.argmin(sums, axis=1)
@@ -206,9 +206,13 @@ def fit_curves(
     mean = (values @ weight) / total
     centred = values - mean[:, None]
     if inside.any():
-        log_tau[inside] = _refined(
-            rounds, centred[inside], weight, grid[at[inside] - 1], grid[at[inside] + 1]
-        )
+        rows, middle = np.flatnonzero(inside), at[inside]
+        left, here, right = (sums[rows, middle + side] for side in (-1, 0, 1))
+        # Vertex of the parabola through the lowest point and its neighbours, grid steps equal.
+        bend = np.maximum(left - 2 * here + right, np.finfo(float).tiny)
+        start = grid[middle] + (grid[1] - grid[0]) * np.clip((left - right) / (2 * bend), -1, 1)
+        bracket = (grid[middle - 1], grid[middle + 1])
+        log_tau[inside] = _refined(rounds, centred[inside], weight, start, bracket)
     decay = np.exp(-np.exp(-log_tau)[:, None] * rounds)
     decay_mean = (decay @ weight) / total
     off = decay - decay_mean[:, None]
@@ -221,14 +225,18 @@ def fit_curves(
 
 
 def _refined(
-    rounds: FloatArray, centred: FloatArray, weight: FloatArray, low: FloatArray, high: FloatArray
+    rounds: FloatArray,
+    centred: FloatArray,
+    weight: FloatArray,
+    start: FloatArray,
+    bracket: tuple[FloatArray, FloatArray],
 ) -> FloatArray:
-    """Return the ln tau in [low, high] where the explained sum N^2 / D is largest.
+    """Return the ln tau in a bracket where the explained sum N^2 / D is largest.
 
     Newton steps on the slope of its logarithm, halving the bracket where a step would leave it.
     """
-    low, high = low.copy(), high.copy()
-    u = (low + high) / 2
+    low, high = (end.copy() for end in bracket)
+    u = start.copy()
     active = np.arange(len(u))
     for _ in range(REFINEMENTS):
         slope, bend = _log_slopes(rounds, centred[active], weight, u[active])
