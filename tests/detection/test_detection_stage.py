@@ -121,6 +121,9 @@ def test_products_pool_over_plain_recordings_only() -> None:
     assert out["blocks"].sum("batch").values.tolist() == [0, 100, 100, 50, 50, 50]
     assert out["injected"].values.tolist() == [0, 0, 1]
     assert all("units" in out[name].attrs for name in out.data_vars)
+    assert out.attrs["reset"] == 1
+    mixed = [(replace(frame, reset=frame.name != "long"), sums) for frame, sums in reduced]
+    assert detection(mixed, SETTINGS).attrs["reset"] == 0
 
 
 @pytest.mark.parametrize("rounds", [1, 2])
