@@ -16,9 +16,10 @@ import yaml
 
 from leakpipe import __version__
 from leakpipe.detection.stage import detection
+from leakpipe.errors import LeakpipeError
 from leakpipe.findings import Finding
 from leakpipe.history.compare import limits_of, neighbours_of, since_last, write_epochs_page
-from leakpipe.history.files import append_once
+from leakpipe.history.files import append_once, locked
 from leakpipe.history.jobs import Job
 from leakpipe.history.publish import store_of
 from leakpipe.logical.stage import logical
@@ -109,10 +110,19 @@ def run_all(config: Config, reporter: Reporter | None = None) -> list[PatchResul
         The code layout is not given or cannot be used.
     RecordingError
         Any recording cannot be used; nothing is run then.
+    LeakpipeError
+        A refit is writing into the same folder of results.
     """
     reporter = reporter or Silent()
     with reporter.step("opening recordings"):
         epochs = usable(find(config))
+    with locked(config.results) as mine:
+        if not mine:
+            raise LeakpipeError(f"{config.results}  is being written by another leakpipe")
+        return _run_epochs(epochs, config, reporter)
+
+
+def _run_epochs(epochs: Sequence[Epoch], config: Config, reporter: Reporter) -> list[PatchResult]:
     results = []
     for epoch in epochs:
         for patch in sorted({one.patch for one in epoch.memories}):
