@@ -91,6 +91,15 @@ def layout_from_file(path: Path) -> Layout:
     if unknown or not content.data or not content.measure or not content.logical:
         problems = unknown or [f"{path}  needs data, measure and logical, each with an entry"]
         raise LayoutError(numbered(problems, "the layout cannot be used"))
+    try:
+        return _layout(content)
+    except LayoutError as error:
+        *problems, closing = str(error).splitlines()
+        named = [f"{path}  {problem}" for problem in problems]
+        raise LayoutError("\n".join([*named, closing])) from None
+
+
+def _layout(content: LayoutFile) -> Layout:
     index = {name: position for position, name in enumerate(content.data)}
     return Layout(
         family=_family(content),

@@ -6,7 +6,7 @@ import difflib
 import json
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any, TypeVar, get_args
+from typing import Any, TypeVar, get_args, get_origin
 
 import yaml
 from pydantic import BaseModel, ValidationError
@@ -181,19 +181,24 @@ def _fields_at(model: type[BaseModel], path: tuple[str | int, ...]) -> list[str]
     """Return the field names of the model that stands at a path."""
     current: Any = model
     for part in path:
-        if not (isinstance(current, type) and issubclass(current, BaseModel)):
-            return []
-        if isinstance(part, int) or part not in current.model_fields:
-            return []
-        current = _model_in(current.model_fields[part].annotation)
-    is_model = isinstance(current, type) and issubclass(current, BaseModel)
-    return list(current.model_fields) if is_model else []
+        if _is_model(current):
+            field = current.model_fields.get(str(part))
+            current = None if field is None else _inside(field.annotation)
+        else:
+            # A key of a mapping of names, or a position in a list.
+            current = _inside(get_args(current)[-1]) if get_args(current) else None
+    return list(current.model_fields) if _is_model(current) else []
 
 
-def _model_in(annotation: Any) -> Any:
-    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+def _is_model(annotation: Any) -> bool:
+    return isinstance(annotation, type) and issubclass(annotation, BaseModel)
+
+
+def _inside(annotation: Any) -> Any:
+    """Return the model or mapping of an annotation that may also be None or a list."""
+    if _is_model(annotation) or get_origin(annotation) is dict:
         return annotation
-    return next((found for arg in get_args(annotation) if (found := _model_in(arg))), None)
+    return next((found for arg in get_args(annotation) if (found := _inside(arg))), None)
 
 
 def _override(

@@ -42,7 +42,7 @@ class RatesSettings(Section):
             "detection_response",
         ],
         ParameterSettings,
-    ] = {}
+    ] = Field(default_factory=dict)
     """Parameters of the joint model that are fixed, bounded or tied. With any, the rates per role
     come from the joint model; without, it is a cross-check of the fit per qubit."""
     draws: Annotated[int, Field(ge=100)] = 400

@@ -101,8 +101,8 @@ def broken(content: dict[str, Any], case: str) -> None:
             measure["M0"]["chek"] = "Z"
         case "type":
             measure["M0"]["check"] = "Y"
-        case "no data":
-            content["data"] = {}
+        case "no checks":
+            content["measure"] = {}
         case "no logical":
             del content["logical"]
         case "position":
@@ -124,7 +124,7 @@ def broken(content: dict[str, Any], case: str) -> None:
         ("unknown logical", "logical Z names data qubit 'Q1', which the layout does not have"),
         ("key", 'measure.M0.chek  unknown key; did you mean "check"?'),
         ("type", "measure.M0.check  must be 'Z' or 'X', got \"Y\""),
-        ("no data", "needs data, measure and logical, each with an entry"),
+        ("no checks", "needs data, measure and logical, each with an entry"),
         ("no logical", "logical  is required"),
         ("position", "data.D0.1  is required"),
         ("twice in a check", "check M0 needs one or more different data qubits"),
