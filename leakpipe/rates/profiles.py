@@ -7,6 +7,7 @@ the roots of a quadratic (Fieller, J. R. Stat. Soc. B 16, 175 (1954), for a rati
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,6 +21,40 @@ FloatArray = NDArray[np.float64]
 POINTS = 400
 """Points in ln tau of an envelope; its ends are stationary there, so the step enters squared (about
 1e-4 of the interval)."""
+
+
+def threshold_ends(
+    excess: Callable[[FloatArray], FloatArray], grid: FloatArray, best: float, threshold: float
+) -> tuple[float, float]:
+    """Return the tau at which a profile over ln tau crosses a threshold around its minimum.
+
+    Parameters
+    ----------
+    excess
+        Residual sums above the lowest at given ln tau.
+    grid
+        Ascending ln tau of the search.
+    best
+        ln tau of the minimum.
+    threshold
+        Excess at the ends.
+
+    Returns
+    -------
+    low, high
+        0 or infinite where the profile stays below the threshold up to the end of the grid.
+    """
+    above = excess(grid) > threshold
+
+    def crossing(x: float) -> float:
+        return float(excess(np.array([x]))[0]) - threshold
+
+    low, high = 0.0, np.inf
+    if (left := grid[above & (grid < best)]).size:
+        low = float(np.exp(brentq(crossing, left[-1], best)))
+    if (right := grid[above & (grid > best)]).size:
+        high = float(np.exp(brentq(crossing, best, right[0])))
+    return low, high
 
 
 @dataclass(frozen=True)
@@ -52,17 +87,7 @@ class Profile:
 
     def tau_ends(self, threshold: float) -> tuple[float, float]:
         """Return where the profile crosses the threshold: (0, inf) where it stays below."""
-        above = self.excess(self.grid) > threshold
-
-        def crossing(x: float) -> float:
-            return float(self.excess(np.array([x]))[0]) - threshold
-
-        low, high = 0.0, np.inf
-        if (left := self.grid[above & (self.grid < self.log_tau)]).size:
-            low = float(np.exp(brentq(crossing, left[-1], self.log_tau)))
-        if (right := self.grid[above & (self.grid > self.log_tau)]).size:
-            high = float(np.exp(brentq(crossing, self.log_tau, right[0])))
-        return low, high
+        return threshold_ends(self.excess, self.grid, self.log_tau, threshold)
 
     def linear(self, log_taus: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Return A, B (g,) and their binomial covariance (g, 2, 2) at fixed ln tau."""

@@ -11,15 +11,19 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq, minimize_scalar
+from scipy.optimize import minimize_scalar
 from scipy.stats import t
 
 from leakpipe.rates.critical import critical_values, search_grid
+from leakpipe.rates.profiles import threshold_ends
 from leakpipe.rates.rise import FEWEST_ROUNDS, FREEDOM, RiseFit, Status, fit_rise, status_of
 from leakpipe.rates.sandwich import limited_ratio
 from leakpipe.rates.varpro import fit_curves, profile_sums
 
 FloatArray = NDArray[np.float64]
+
+TOLERANCE = 1e-7
+"""Of ln tau: the residual sum is flat below the root of a double's precision."""
 
 
 @dataclass(frozen=True)
@@ -93,42 +97,12 @@ def fit_shared_rise(
     u, lowest = float(found.x), float(found.fun)
     linear = [_linear(rounds, p, w, u) for p, w in zip(probability, weight, strict=True)]
     level, amplitude = (np.array([one[k] for one in linear]) for k in (0, 1))
-    batches = int(np.any(deviations != 0, axis=(1, 2)).sum())
-    freedom = max(batches - 1, 1)
-    correction = batches / freedom
-    # With A and B of every check projected out, tau is a single parameter with an efficient score.
-    scores, information = np.zeros(len(deviations)), 0.0
-    influences = []
-    for check in range(checks):
-        basis, slope = _columns(rounds, amplitude[check], u)
-        w = weight[check]
-        inner = np.linalg.inv((basis * w[:, None]).T @ basis)
-        carried = inner @ (basis * w[:, None]).T @ slope
-        off = slope - basis @ carried
-        scores += deviations[:, check] @ (w * off)
-        information += float(w @ off**2)
-        influences.append((deviations[:, check] @ (w[:, None] * basis) @ inner, carried))
-    if not information > 0:
+    joint = _joint_errors(rounds, amplitude, u, weight, deviations)
+    if joint is None:
         return None
-    of_tau = scores / information
-    tau_variance = correction * float(of_tau @ of_tau)
-    errors = np.array(
-        [
-            np.sqrt(correction * ((own - of_tau[:, None] * carried) ** 2).sum(axis=0))
-            for own, carried in influences
-        ]
-    )
-    ratio = limited_ratio(tau_variance, 1 / information)
-    threshold = float(t.ppf(0.975, freedom)) ** 2 * ratio
-
-    def crossing(x: float) -> float:
-        return float(sums(np.array([x]))[0]) - lowest - threshold
-
-    above, low, high = profile - lowest > threshold, 0.0, np.inf
-    if (left := grid[above & (grid < u)]).size:
-        low = float(np.exp(brentq(crossing, left[-1], u)))
-    if (right := grid[above & (grid > u)]).size:
-        high = float(np.exp(brentq(crossing, u, right[0])))
+    ratio = limited_ratio(joint.tau_variance, joint.tau_binomial)
+    threshold = float(t.ppf(0.975, joint.freedom)) ** 2 * ratio
+    low, high = threshold_ends(lambda x: sums(x) - lowest, grid, u, threshold)
     mean = fit_rise(
         rounds, probability.mean(axis=0), variance.sum(axis=0) / checks**2, deviations.mean(axis=1)
     )
@@ -140,18 +114,56 @@ def fit_shared_rise(
         tau=tau,
         tau_low=low,
         tau_high=high,
-        log_tau_error=float(np.sqrt(tau_variance)),
+        log_tau_error=float(np.sqrt(joint.tau_variance)),
         variance_ratio=ratio,
         level=level,
         amplitude=amplitude,
-        level_error=errors[:, 0],
-        amplitude_error=errors[:, 1],
+        level_error=joint.linear_errors[:, 0],
+        amplitude_error=joint.linear_errors[:, 1],
         mean=mean,
     )
 
 
-TOLERANCE = 1e-7
-"""Of ln tau: the residual sum is flat below the root of a double's precision."""
+@dataclass(frozen=True)
+class _JointErrors:
+    """Variances of ln tau, sandwich and binomial; (check, 2) errors of A and B; freedom."""
+
+    tau_variance: float
+    tau_binomial: float
+    linear_errors: FloatArray
+    freedom: int
+
+
+def _joint_errors(
+    rounds: FloatArray, amplitude: FloatArray, u: float, weight: FloatArray, deviations: FloatArray
+) -> _JointErrors | None:
+    """Return sandwich errors with the batches of all checks together; None without a rise.
+
+    With A and B of every check projected out, ln tau is a single parameter with an efficient score.
+    """
+    batches = int(np.any(deviations != 0, axis=(1, 2)).sum())
+    freedom = max(batches - 1, 1)
+    scores, information = np.zeros(len(deviations)), 0.0
+    influences = []
+    for check, w in enumerate(weight):
+        basis, slope = _columns(rounds, amplitude[check], u)
+        inner = np.linalg.inv((basis * w[:, None]).T @ basis)
+        carried = inner @ (basis * w[:, None]).T @ slope
+        off = slope - basis @ carried
+        scores += deviations[:, check] @ (w * off)
+        information += float(w @ off**2)
+        influences.append((deviations[:, check] @ (w[:, None] * basis) @ inner, carried))
+    if not information > 0:
+        return None
+    of_tau = scores / information
+    correction = batches / freedom
+    squares = [((own - of_tau[:, None] * by) ** 2).sum(axis=0) for own, by in influences]
+    return _JointErrors(
+        correction * float(of_tau @ of_tau),
+        1 / information,
+        np.sqrt(correction * np.array(squares)),
+        freedom,
+    )
 
 
 def _columns(rounds: FloatArray, amplitude: float, u: float) -> tuple[FloatArray, FloatArray]:
