@@ -52,7 +52,9 @@ def alarms(
             clue = evidence.around(
                 series.qubit, neighbours, judged.panel, judged.chart, since, int(now)
             )
-            words = f"{words}; {clue.words}"
+            if int(judged.chart.alarm[now, column]) > 0:
+                # Nobody has to look for the cause of less leakage.
+                words = f"{words}; {clue.words}"
             numbers["neighbours_moved"] = ",".join(clue.moved)
         elif series.role:
             flagged = _flagged(qubits, series.role, int(now), since, numbers["direction"])

@@ -111,7 +111,7 @@ def _shared_shift(patch: str, qubits: Judged, now: int, *, again: bool) -> Findi
     ratio, error = float(np.exp(run.shared[now])), float(run.shared_error[now])
     low, high = (ratio * float(np.exp(sign * 1.96 * error)) for sign in (-1, 1))
     count = int(np.isfinite(run.deviation[now]).sum())
-    moved = f"leakage of {count} qubits moved together by a factor {ratio:.2f}"
+    moved = f"Leakage of {count} qubits moved together by a factor {ratio:.2f}"
     interval_words = f"({low:.2f} to {high:.2f})"
     clue = (
         "for the second epoch: either both calibrations are off, or the whole chip changed"
