@@ -93,6 +93,7 @@ def fit_lags(
     block_products: FloatArray,
     blocks: FloatArray,
     growth: FloatArray,
+    visible: FloatArray,
     first_lag: int = FIRST_LAG,
 ) -> LagFit | None:
     """Fit a lam^k to the covariance of a set of pairs, summed over them.
@@ -106,6 +107,10 @@ def fit_lags(
     growth
         (round,) expected leaked population relative to steady, the weight of each early round; 0
         leaves a round out.
+    visible
+        (round,) 1 - 2 d of a round over that of round 0: what ordinary errors and leakage leave to
+        be seen of a flip. It falls while the detection probability rises, and lam would come out
+        too small without it.
     first_lag
         Smallest lag that ordinary errors do not reach: 2 with reset, 3 without.
     """
@@ -115,9 +120,12 @@ def fit_lags(
     if len(lag_axis) < 3 or products.shape[1] == 0:
         return None
     weight = covariances(products[:, :1], block_products[:, :1], blocks)[1]
-    # Cov(r, k) = a growth(r) lam^k with noise about equal in every round: least squares over r is
-    # sum growth * product / sum growth^2.
-    g = growth[None, :, None]
+    # Cov(r, k) = a w(r, k) lam^k with w = growth(r) visible(r) visible(r + k) and noise about equal
+    # in every round: least squares over r is sum w * product / sum w^2.
+    later = np.zeros((rounds, lags))
+    for lag in range(lags):
+        later[: rounds - lag, lag] = visible[lag:]
+    g = (growth * visible)[None, :, None] * later[None]
     numerator = (g * (p - b / BLOCK) / (BLOCK - 1)).sum(axis=1)[:, lag_axis]
     denominator = (g**2 * weight).sum(axis=1)[:, lag_axis]
     total = denominator.sum(axis=0)

@@ -9,7 +9,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from leakpipe.config.rates import RatesSettings
-from leakpipe.rates.populations import RoleFit, Series, fit_role
+from leakpipe.rates.populations import START_DEVIATION, RoleFit, Series, fit_role
 
 ROLES = ("data", "measure")
 START_RANGE = 3.0
@@ -190,7 +190,8 @@ def _fitted(
     warm = fit_role(series, count, memory_prior=prior, free_start=True, excitation=excitation)
     # A flat population may be one that settles at once or one that started settled. The nearly
     # cold start is the default; a warm one must fit better by far.
-    if fit.chi_square - warm.chi_square > START_RANGE**2:
+    pulled = (fit.start / START_DEVIATION) ** 2
+    if fit.chi_square + pulled - warm.chi_square > START_RANGE**2:
         fit, basis = warm, f"{basis}; with a leaked population at round 0"
     levels, memories = fit.draws(settings.draws, rng)
     full_levels = np.full((settings.draws, len(names)), np.nan)

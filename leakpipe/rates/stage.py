@@ -20,6 +20,7 @@ from leakpipe.rates.curves import (
     memory_of_code,
 )
 from leakpipe.rates.doubts import rate_findings
+from leakpipe.rates.jointly import joint_estimates, joint_findings, joint_model, roles_by_joint
 from leakpipe.rates.reported import (
     check_estimates,
     code_estimates,
@@ -70,6 +71,10 @@ def rates(
     variables |= qubit_estimates(roles)
     variables |= check_estimates(per_check)
     variables |= drawn_curves(detection, curves, mean_rise, same, pairs)
+    joint = joint_model(readout, curves, settings)
+    variables |= joint_estimates(joint)
+    if settings.parameters:
+        variables |= roles_by_joint(joint)
     transport, transport_z = transport_excess(detection, readout, layout)
     variables |= store("transport", (), transport, units="per leaked reading")
     variables["transport_z"] = ((), transport_z, {"units": "1"})
@@ -99,4 +104,5 @@ def rates(
         },
         attrs={"convention": "discrete, per round: p[r+1] = p[r] + G (1 - p[r]) - S p[r]"},
     )
-    return with_findings(out, rate_findings(out, mean_rise, same, transport_z, layout))
+    findings = rate_findings(out, mean_rise, same, transport_z, layout)
+    return with_findings(out, [*findings, *joint_findings(joint, roles, bool(settings.parameters))])
