@@ -141,6 +141,13 @@ def detection(
         "blocks": (("batch", "round"), blocks, {"units": "1"}),
         "missing": ("recording", np.array(lost), {"units": "1"}),
     }
+    # What was put into |2> on purpose: no name, round 0 and NaN where nothing was.
+    injected = [frame.injected or ("", 0, float("nan")) for frame in frames]
+    for position, (name, units) in enumerate(
+        (("injected_qubit", ""), ("injected_round", "rounds"), ("injected_probability", "1"))
+    ):
+        column = [one[position] for one in injected]
+        variables[name] = ("recording", column, {"units": units, "long_name": name})
     out = xr.Dataset(
         variables,
         coords={

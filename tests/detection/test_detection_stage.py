@@ -120,6 +120,9 @@ def test_products_pool_over_plain_recordings_only() -> None:
     assert out["product_shots"].sum("batch").values.tolist() == [0, 5000, 5000, 2500, 2500, 2500]
     assert out["blocks"].sum("batch").values.tolist() == [0, 100, 100, 50, 50, 50]
     assert out["injected"].values.tolist() == [0, 0, 1]
+    assert out["injected_qubit"].values.tolist() == ["", "", layout.data[0]]
+    assert out["injected_round"].values.tolist() == [0, 0, 1]
+    np.testing.assert_array_equal(out["injected_probability"], [np.nan, np.nan, 1.0])
     assert all("units" in out[name].attrs for name in out.data_vars)
     assert out.attrs["reset"] == 1
     mixed = [(replace(frame, reset=frame.name != "long"), sums) for frame, sums in reduced]
