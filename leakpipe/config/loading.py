@@ -18,6 +18,7 @@ from leakpipe.config.scalars import compose, line_of
 from leakpipe.errors import ConfigError, numbered
 
 Model = TypeVar("Model", bound=Section)
+UNION_PARTS = ("literal", "tagged-union", "str", "int", "float", "FromFile")
 NOTHING_RUN = "nothing was run"
 
 
@@ -131,7 +132,7 @@ def _by_line(problem: str) -> tuple[str, int]:
 
 def _in_value(value: Any, detail: ErrorDetails, part: str | int) -> bool:
     """Union members add parts such as "function-after[...]" to a path: leave them out."""
-    return isinstance(part, int) or ("[" not in part and part not in ("literal", "tagged-union"))
+    return isinstance(part, int) or ("[" not in part and part not in UNION_PARTS)
 
 
 def _say(model: type[BaseModel], path: tuple[str | int, ...], detail: ErrorDetails) -> str:
@@ -182,7 +183,9 @@ def _fields_at(model: type[BaseModel], path: tuple[str | int, ...]) -> list[str]
     current: Any = model
     for part in path:
         if _is_model(current):
-            field = current.model_fields.get(str(part))
+            if isinstance(part, int):
+                continue  # a position in a list of such models
+            field = current.model_fields.get(part)
             current = None if field is None else _inside(field.annotation)
         else:
             # A key of a mapping of names, or a position in a list.

@@ -12,6 +12,7 @@ from leakpipe.config.base import Section
 from leakpipe.config.detection import DetectionSettings
 from leakpipe.config.history import HistorySettings
 from leakpipe.config.logical import LogicalSettings
+from leakpipe.config.mapping import MappingSettings
 from leakpipe.config.rates import RatesSettings
 from leakpipe.config.readout import ReadoutSettings
 from leakpipe.config.report import ReportSettings
@@ -43,7 +44,18 @@ class RecordingsSettings(Section):
     folder: Path = Path("recordings")
     """Folder with calibration and memory recordings, searched with all its subfolders."""
     patterns: tuple[str, ...] = ("*.nc", "*.zarr")
-    """File name patterns of recordings."""
+    """File name patterns of recordings; those of a mapping are added."""
+    mapping: MappingSettings | None = None
+    """How files that do not keep the data contract are read."""
+
+    @model_validator(mode="after")
+    def _with_mapped_files(self) -> RecordingsSettings:
+        if self.mapping is not None:
+            ways = (self.mapping.calibration, self.mapping.memory)
+            wanted = (*self.patterns, *(way.files for way in ways if way is not None))
+            # The section is frozen; this is part of making it.
+            object.__setattr__(self, "patterns", tuple(dict.fromkeys(wanted)))
+        return self
 
 
 class ComputeSettings(Section):

@@ -9,9 +9,10 @@ from pathlib import Path
 
 from leakpipe.codes.files import layout_for
 from leakpipe.codes.layout import Layout
+from leakpipe.config.mapping import MappingSettings
 from leakpipe.config.models import Config
 from leakpipe.errors import RecordingError, numbered
-from leakpipe.recordings.contract import parse_time
+from leakpipe.recordings.contract import calibration_problems, parse_time
 from leakpipe.recordings.opening import MemoryRecording, describe_memory
 from leakpipe.recordings.source import opened
 
@@ -26,6 +27,7 @@ class CalibrationFile:
     calibration_id: str
     acquired_at: datetime
     device: str
+    mapping: MappingSettings | None = None
 
 
 @dataclass(frozen=True)
@@ -99,7 +101,7 @@ def find_among(config: Config, paths: Sequence[Path]) -> Found:
     """
     folder = config.recordings.folder
     layout = layout_of(config)
-    calibrations, memories, problems = _sort(paths, layout)
+    calibrations, memories, problems = _sort(paths, layout, config.recordings.mapping)
     if config.device is not None:
         calibrations = [one for one in calibrations if one.device == config.device]
         memories = [one for one in memories if one.device == config.device]
@@ -155,26 +157,24 @@ def _layout_file(folder: Path) -> Path | None:
 
 
 def _sort(
-    paths: Sequence[Path], layout: Layout
+    paths: Sequence[Path], layout: Layout, mapping: MappingSettings | None
 ) -> tuple[list[CalibrationFile], list[MemoryRecording], list[str]]:
     calibrations, memories, problems = [], [], []
     for path in paths:
         try:
-            with opened(path) as source:
+            with opened(path, mapping) as source:
                 attributes = source.outline().attributes
             if attributes.get("recording") == "calibration":
-                calibrations.append(_calibration_file(path))
+                calibrations.append(_calibration_file(path, mapping))
             else:
-                memories.append(describe_memory(path, lambda _patch: layout))
+                memories.append(describe_memory(path, lambda _patch: layout, mapping))
         except RecordingError as error:
             problems.append(str(error))
     return calibrations, memories, problems
 
 
-def _calibration_file(path: Path) -> CalibrationFile:
-    from leakpipe.recordings.contract import calibration_problems
-
-    with opened(path) as source:
+def _calibration_file(path: Path, mapping: MappingSettings | None) -> CalibrationFile:
+    with opened(path, mapping) as source:
         outline = source.outline()
     problems = calibration_problems(outline)
     if problems:
@@ -186,6 +186,7 @@ def _calibration_file(path: Path) -> CalibrationFile:
         calibration_id=str(outline.attributes["calibration_id"]),
         acquired_at=acquired,
         device=str(outline.attributes["device"]),
+        mapping=mapping,
     )
 
 

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from leakpipe.codes.events import MISSING
 from leakpipe.codes.layout import Layout
+from leakpipe.config.mapping import MappingSettings
 from leakpipe.errors import RecordingError, numbered
 from leakpipe.recordings.contract import (
     CALIBRATION_DIMS,
@@ -49,6 +50,8 @@ class MemoryRecording:
         Positions in the file of the layout's measure and data qubits.
     has_verdict, has_started_at
         Whether the optional variables are there.
+    mapping
+        How a foreign file is read.
     """
 
     path: Path
@@ -63,6 +66,7 @@ class MemoryRecording:
     data_order: tuple[int, ...]
     has_verdict: bool
     has_started_at: bool
+    mapping: MappingSettings | None = None
 
 
 def content_hash(path: Path) -> str:
@@ -78,8 +82,15 @@ def content_hash(path: Path) -> str:
     return digest.hexdigest()
 
 
-def open_calibration(path: Path) -> xr.Dataset:
+def open_calibration(path: Path, mapping: MappingSettings | None = None) -> xr.Dataset:
     """Return a calibration recording.
+
+    Parameters
+    ----------
+    path
+        File or store.
+    mapping
+        How a foreign file is read.
 
     Returns
     -------
@@ -92,7 +103,7 @@ def open_calibration(path: Path) -> xr.Dataset:
     RecordingError
         The file breaks the contract; everything wrong is listed.
     """
-    with opened(path) as source:
+    with opened(path, mapping) as source:
         outline = source.outline()
         problems = calibration_problems(outline)
         if problems:
@@ -118,7 +129,9 @@ def open_calibration(path: Path) -> xr.Dataset:
     )
 
 
-def describe_memory(path: Path, layout_of: Callable[[str], Layout]) -> MemoryRecording:
+def describe_memory(
+    path: Path, layout_of: Callable[[str], Layout], mapping: MappingSettings | None = None
+) -> MemoryRecording:
     """Check a memory recording against the contract and its layout, without reading its shots.
 
     Parameters
@@ -127,13 +140,15 @@ def describe_memory(path: Path, layout_of: Callable[[str], Layout]) -> MemoryRec
         File or store.
     layout_of
         Gives the layout of a patch by its name.
+    mapping
+        How a foreign file is read.
 
     Raises
     ------
     RecordingError
         The file breaks the contract or its names do not match the layout; everything is listed.
     """
-    with opened(path) as source:
+    with opened(path, mapping) as source:
         outline = source.outline()
     problems = memory_problems(outline)
     if problems:
@@ -184,6 +199,7 @@ def describe_memory(path: Path, layout_of: Callable[[str], Layout]) -> MemoryRec
         data_order=tuple(data.index(name) for name in layout.data),
         has_verdict="verdict" in outline.dims,
         has_started_at="started_at" in outline.dims,
+        mapping=mapping,
     )
 
 
@@ -208,7 +224,7 @@ def chunks(
     """
     size = max(shots_per_chunk // BLOCK, 1) * BLOCK
     stop = recording.frame.shots if last is None else min(last, recording.frame.shots)
-    with opened(recording.path) as source:
+    with opened(recording.path, recording.mapping) as source:
         fixed = _fixed_preparation(source, recording)
         for start in range(first, stop, size):
             end = min(start + size, stop)

@@ -13,8 +13,10 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from leakpipe.config.mapping import MappingSettings
 from leakpipe.errors import RecordingError
 from leakpipe.recordings.contract import Outline
+from leakpipe.recordings.mapping import mapped, role_of
 
 SMALL = ("qubit", "prepared", "quadrature", "sample", "round", "measure", "data")
 NUMERIC = "iufb"
@@ -35,8 +37,15 @@ class Source(Protocol):
 
 
 @contextmanager
-def opened(path: Path) -> Iterator[Source]:
+def opened(path: Path, mapping: MappingSettings | None = None) -> Iterator[Source]:
     """Open a recording for reading.
+
+    Parameters
+    ----------
+    path
+        File or store.
+    mapping
+        How foreign files are read; files that fit none of its patterns keep the contract.
 
     Raises
     ------
@@ -45,6 +54,11 @@ def opened(path: Path) -> Iterator[Source]:
     """
     if not path.exists():
         raise RecordingError(f"{path}  does not exist")
+    role = role_of(path, mapping)
+    if mapping is not None and role is not None:
+        with mapped(path, mapping, role) as source:
+            yield source
+        return
     if path.is_dir():
         yield _ZarrSource(path)
         return
