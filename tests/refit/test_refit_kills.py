@@ -187,3 +187,23 @@ def test_a_signal_ends_the_pass_cleanly(tmp_path: Path, number: signal.Signals) 
     assert signal.getsignal(number) is before
     one_pass(config)
     assert state(config) == expected
+
+
+@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
+def test_the_repeating_command_ends_cleanly_when_asked(
+    tmp_path: Path, number: signal.Signals
+) -> None:
+    """`--every` sleeps most of its life: a signal ends it at once, with 0 and without a word."""
+    (tmp_path / "recordings").mkdir()
+    config = tmp_path / "nightly.yaml"
+    config.write_text("code: {family: repetition, distance: 3}\n")
+    command = [sys.executable, "-m", "leakpipe", "refit", str(config), "--every", "1h", "--quiet"]
+    with subprocess.Popen(command, stderr=subprocess.PIPE, text=True) as process:
+        while not (tmp_path / "results" / ".refit.json").exists():
+            assert process.poll() is None, "the loop ended by itself"
+            time.sleep(0.02)
+        time.sleep(0.2)
+        process.send_signal(number)
+        _, said = process.communicate(timeout=20)
+    assert process.returncode == 0
+    assert said == ""
