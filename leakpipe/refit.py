@@ -202,6 +202,8 @@ class _Refit:
             self.told.failures += [text for _, text in self.ledger.failures.values()]
             return self.told
         self.ledger.settled = ""
+        # A kill from here on does not cost the hashes just made.
+        self.ledger.save(self.results)
         self._work(inputs, {one.key: one for one in done})
         self._close(inputs)
         return self.told
