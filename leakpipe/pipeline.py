@@ -178,7 +178,7 @@ def run_patch(
         for name, stage in STAGES:
             with reporter.step(f"{label} {basis}: {name}"):
                 done[name] = stage(Material(model, reduced, config, done))
-        newest = open_calibration(epoch.calibrations[-1].path)
+        newest = open_calibration(epoch.calibrations[-1].path, config.recordings.mapping)
         reports.append(_report(epoch, recordings, done, model, newest, config))
     return reports
 

@@ -66,7 +66,7 @@ def calibrated(paths: Sequence[Path], config: Config) -> tuple[xr.Dataset, str]:
     config
         Its `readout` section and its seed; the results folder holds the cache.
     """
-    settings = config.readout.model_dump(mode="json")
+    settings = [config.readout.model_dump(mode="json"), _mapping(config)]
     hashes = [hash_of(path) for path in paths]
     key = digest_of(["readout model", RESULT_VERSION, settings, config.seed, hashes])
     cache = cache_of(config)
@@ -77,7 +77,7 @@ def calibrated(paths: Sequence[Path], config: Config) -> tuple[xr.Dataset, str]:
         except (ValueError, KeyError):
             # Written by another version: as good as absent.
             pass
-    calibrations = [open_calibration(path) for path in paths]
+    calibrations = [open_calibration(path, config.recordings.mapping) for path in paths]
     model = calibrate(calibrations, config.readout, config.seed)
     arrays, structure = packed(_parts(model))
     cache.put(key, arrays, {"value": structure})
@@ -127,12 +127,19 @@ def _key_of(recording: MemoryRecording, model_key: str, config: Config) -> str:
             RESULT_VERSION,
             model_key,
             settings,
+            _mapping(config),
             recording.frame.name,
             recording.frame.leaked_reads,
             _outline(recording.frame.layout),
             hash_of(recording.path),
         ]
     )
+
+
+def _mapping(config: Config) -> object:
+    """Return how foreign files are read: the same content read otherwise is other shots."""
+    mapping = config.recordings.mapping
+    return None if mapping is None else mapping.model_dump(mode="json")
 
 
 def _outline(layout: Layout) -> list[object]:

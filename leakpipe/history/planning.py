@@ -7,6 +7,7 @@ from dataclasses import replace
 from datetime import UTC
 from pathlib import Path
 
+from leakpipe.config.mapping import MappingSettings
 from leakpipe.config.models import Config
 from leakpipe.errors import RecordingError
 from leakpipe.history.jobs import Job, Plan
@@ -27,7 +28,7 @@ def plan_recordings(config: Config, complete: Sequence[Path], waiting: Sequence[
         The code layout is not given or cannot be used.
     """
     if not complete:
-        return Plan((), _keys_of(waiting))
+        return Plan((), _keys_of(waiting, config.recordings.mapping))
     found = find_among(config, complete)
     jobs = []
     for epoch in found.epochs:
@@ -43,7 +44,7 @@ def plan_recordings(config: Config, complete: Sequence[Path], waiting: Sequence[
         for sentence in found.problems
         if sentence.startswith(f"{path}  ")
     }
-    return Plan(tuple(jobs), _keys_of(waiting), problems)
+    return Plan(tuple(jobs), _keys_of(waiting, config.recordings.mapping), problems)
 
 
 def _job(epoch: Epoch, patch: str) -> Job:
@@ -69,7 +70,7 @@ def _contributing(
     missing = set(qubits)
     used: list[CalibrationFile] = []
     for calibration in reversed(calibrations):
-        with opened(calibration.path) as source:
+        with opened(calibration.path, calibration.mapping) as source:
             has = {str(name) for name in source.outline().coordinates["qubit"]}
         if not used or has & missing:
             used.append(calibration)
@@ -79,12 +80,12 @@ def _contributing(
     return tuple(reversed(used))
 
 
-def _keys_of(waiting: Sequence[Path]) -> frozenset[Key]:
+def _keys_of(waiting: Sequence[Path], mapping: MappingSettings | None) -> frozenset[Key]:
     """Return the results that recordings still being written say they belong to."""
     keys = set()
     for path in waiting:
         try:
-            with opened(path) as source:
+            with opened(path, mapping) as source:
                 attributes = source.outline().attributes
         except RecordingError:
             continue
