@@ -35,16 +35,7 @@ def code_estimates(
 ) -> dict[Any, Any]:
     """Return relative rise, settling time and kappa of the code."""
     basis = f"mean detection probability of {len(curves.rounds)} interior rounds"
-    if rise.status == "no data":
-        relative = Estimate.unknown("too few interior rounds to fit a rise")
-    elif rise.status == "no rise":
-        relative = Estimate.upper_limit(
-            amplitude_limit(rise) / rise.start, f"{basis}: no significant rise"
-        )
-    elif rise.status == "long":
-        relative = Estimate.unknown(f"{basis}: the rise has not settled, only its slope is known")
-    else:
-        relative = Estimate.from_error(rise.relative, rise.relative_error, basis, freedom=FREEDOM)
+    relative = relative_rise(rise, basis)
     settling = _settling(together, rise)
     ratio = _kappa(rise, same, together, settings, curves.events.shape[2])
     return {
@@ -53,6 +44,29 @@ def code_estimates(
         **store("kappa", (), ratio),
         "rise_status": ((), rise.status),
     }
+
+
+def relative_rise(fit: RiseFit, basis: str) -> Estimate:
+    """Return the relative rise with its profile interval, or what is known instead."""
+    if fit.status == "no data":
+        return Estimate.unknown("too few interior rounds to fit a rise")
+    if fit.start <= 0:
+        return Estimate.unknown(f"{basis}: the fit leaves no detection at round 0")
+    if fit.status == "no rise":
+        return Estimate.upper_limit(
+            amplitude_limit(fit) / fit.start, f"{basis}: no significant rise"
+        )
+    if fit.status == "long":
+        return Estimate.unknown(
+            f"{basis}: the rise has not settled; known is its slope, {fit.slope:.2g} "
+            f"+- {fit.slope_error:.1g} per round at the start"
+        )
+    low, high = fit.relative_low, fit.relative_high
+    if not (np.isfinite(low) and np.isfinite(high)):
+        ends = [end if np.isfinite(end) else None for end in (low, high)]
+        reason = f"{basis}: over before the first fitted rounds, the rise from round 0 is open"
+        return Estimate(None, ends[0], ends[1], identifiable=False, basis=reason)
+    return Estimate(fit.relative, low, high, basis=basis)
 
 
 def _settling(together: tuple[float, float, str] | None, rise: RiseFit) -> Estimate:
@@ -226,12 +240,7 @@ def check_estimates(fits: list[RiseFit]) -> dict[Any, Any]:
         basis = "its detection probability over rounds"
         error = float(np.sqrt(max(np.array([1, -1, 0]) @ fit.covariance @ np.array([1, -1, 0]), 0)))
         start.append(Estimate.from_error(fit.start, error, basis, freedom=FREEDOM))
-        if fit.status in ("settled", "short", "falling"):
-            rise.append(
-                Estimate.from_error(fit.relative, fit.relative_error, basis, freedom=FREEDOM)
-            )
-        else:
-            rise.append(Estimate.unknown(f"{basis}: {fit.status}"))
+        rise.append(relative_rise(fit, basis))
         if fit.status == "settled":
             settling.append(Estimate(fit.tau, fit.tau_low, fit.tau_high, basis=basis))
         else:

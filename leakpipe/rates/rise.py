@@ -103,8 +103,8 @@ class RiseFit:
 
     @property
     def relative(self) -> float:
-        """B / (A - B)."""
-        return self.amplitude / self.start
+        """B / (A - B); NaN where nothing ever fires at round 0."""
+        return self.amplitude / self.start if self.start else float("nan")
 
     @property
     def relative_error(self) -> float:
@@ -228,7 +228,9 @@ def jacobian_of(rounds: FloatArray, amplitude: float, log_tau: float) -> FloatAr
 
 
 def relative_slopes(level: float, amplitude: float) -> FloatArray:
-    """Return the slopes of B / (A - B) with A, B and ln tau."""
+    """Return the slopes of B / (A - B) with A, B and ln tau; 0 where A = B."""
+    if level == amplitude:
+        return np.zeros(3)
     return np.array([-amplitude, level, 0.0]) / (level - amplitude) ** 2
 
 

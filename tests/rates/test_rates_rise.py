@@ -8,6 +8,7 @@ import statsmodels.api as statsmodels
 from scipy.stats import binom
 
 from leakpipe.rates.critical import critical_values
+from leakpipe.rates.reported import relative_rise
 from leakpipe.rates.rise import FREEDOM, NO_DATA, amplitude_limit, fit_rise, status_of
 from leakpipe.rates.shared_rise import fit_shared_rise, refit_rises
 
@@ -315,3 +316,39 @@ def test_bootstrap_spread_equals_sandwich() -> None:
         assert draws.amplitude[:, check].std() == pytest.approx(fit.amplitude_error, rel=0.15)
         same = refit_rises(ROUNDS, events, trials, np.arange(BATCHES)[None])
         assert same.log_tau[0, check] == pytest.approx(np.log(fit.tau), abs=1e-8)
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("level", [0.0, 0.1])
+def test_curve_without_any_scatter(level: float) -> None:
+    """A silent or exactly constant check is no rise, without a warning or a division by zero."""
+    args = (ROUNDS, np.full(24, level), np.full(24, 1e-6), np.zeros((50, 24)))
+    fit = fit_rise(*args)
+    assert fit.status == "no rise"
+    assert fit.amplitude == 0
+    assert 0 < amplitude_limit(fit) < 0.1
+    estimate = relative_rise(fit, "it")
+    assert not estimate.identifiable
+    assert estimate.value is None
+    assert (estimate.high is None) == (level == 0)
+    events = np.full((50, 1, 24), level * 1000)
+    draws = refit_rises(ROUNDS, events, np.full(events.shape, 1000.0), np.arange(50)[None])
+    assert draws.amplitude == pytest.approx(0, abs=1e-15)
+
+
+def test_relative_rise_says_what_is_known() -> None:
+    """Settled gives a profile interval, long its slope in words, short an open upper end."""
+    rng = np.random.default_rng(12)
+    settled = fit_rise(*inputs(*counted(rise(), 200_000, rng)))
+    estimate = relative_rise(settled, "it")
+    assert estimate.identifiable
+    assert (estimate.low, estimate.high) == (settled.relative_low, settled.relative_high)
+    long = fit_rise(*inputs(*counted(rise(amplitude=0.1, tau=60.0), 100_000, rng)))
+    words = relative_rise(long, "it")
+    assert words.value is None
+    assert f"{long.slope:.2g}" in words.basis
+    short = fit_rise(*inputs(*counted(rise(amplitude=0.9, tau=0.4), 400_000, rng)))
+    opened = relative_rise(short, "it")
+    assert opened.value is None
+    assert not opened.identifiable
+    assert relative_rise(NO_DATA, "it").basis.startswith("too few")
