@@ -41,13 +41,14 @@ EXCEPTIONS = {("share", "logical"): {"leakpipe.logical.per_round"}}
 LABELLED_HELPERS = {
     "rates/curves.py",
     "rates/doubts.py",
+    "rates/jointly.py",
     "rates/reported.py",
     "rates/roles.py",
     "rates/transport.py",
 }
 """Modules beside a `stage.py` that work on its labelled datasets, as the architecture page says."""
 CORE_LIBRARIES = {"numpy", "scipy", "numba"}
-NAMED_LIBRARIES = {"readout/weights.py": {"sklearn"}}
+NAMED_LIBRARIES = {"readout/weights.py": {"sklearn"}, "rates/joint.py": {"lmfit"}}
 CORE_OF_LEAKPIPE = (
     "leakpipe.codes",
     "leakpipe.estimates",

@@ -108,8 +108,7 @@ def validated(
     try:
         result = model.model_validate_json(json.dumps(value, default=str))
     except ValidationError as error:
-        for detail in error.errors():
-            path = tuple(part for part in detail["loc"] if _in_value(value, detail, part))
+        for path, sentence in _sentences(model, error):
             place = next(
                 (
                     text
@@ -118,10 +117,34 @@ def validated(
                 ),
                 f"{source}:{line_of(node, path)}",
             )
-            found.append(f"{place}  {'.'.join(map(str, path))}  {_say(model, path, detail)}")
+            found.append(f"{place}  {'.'.join(map(str, path))}  {sentence}")
     if found or result is None:
         raise ConfigError(numbered(sorted(found, key=_by_line), NOTHING_RUN))
     return result
+
+
+def _sentences(
+    model: type[BaseModel], error: ValidationError
+) -> list[tuple[tuple[str | int, ...], str]]:
+    """Return the path and sentence of each problem; those of a union's members become one."""
+    details = error.errors()
+    paths = [tuple(part for part in one["loc"] if _in_value(part)) for one in details]
+    said: dict[tuple[str | int, ...], list[str]] = {}
+    for path, detail in zip(paths, details, strict=True):
+        in_union = len(path) < len(detail["loc"])
+        if in_union and any(len(one) > len(path) and one[: len(path)] == path for one in paths):
+            continue  # one member fits so well that its own problem is told
+        said.setdefault(path, []).append(_say(model, path, detail))
+    return [(path, _one_of(sentences)) for path, sentences in said.items()]
+
+
+def _one_of(sentences: list[str]) -> str:
+    others = [one for one in sentences if not one.startswith("must be ")]
+    if len(sentences) == 1 or others:
+        return (others or sentences)[0]
+    kinds = [one.removeprefix("must be ").rpartition(", got ")[0] for one in sentences]
+    got = sentences[0].rpartition(", got ")[2]
+    return f"must be {', '.join(kinds[:-1])} or {kinds[-1]}, got {got}"
 
 
 def _by_line(problem: str) -> tuple[str, int]:
@@ -130,7 +153,7 @@ def _by_line(problem: str) -> tuple[str, int]:
     return (name, int(line)) if line.isdigit() else (place, 0)
 
 
-def _in_value(value: Any, detail: ErrorDetails, part: str | int) -> bool:
+def _in_value(part: str | int) -> bool:
     """Union members add parts such as "function-after[...]" to a path: leave them out."""
     return isinstance(part, int) or ("[" not in part and part not in UNION_PARTS)
 

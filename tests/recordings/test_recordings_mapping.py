@@ -287,7 +287,19 @@ def test_contract_files_may_stand_beside_foreign_ones(tmp_path: Path, shots: Pat
             "arrays: {points: {array: a, axes: [shot]}}",
             "recordings.mapping.memory.arrays.points  must be 'iq', 'trace'",
         ),
-        ("attributes: {patch: {}}", "name an array or an attribute"),
+        (
+            "attributes: {patch: {}}",
+            "recordings.mapping.memory.attributes.patch  name an array or an attribute, got {}",
+        ),
+        (
+            "attributes: {basis: [1]}",
+            "recordings.mapping.memory.attributes.basis  must be text, a whole number, a number "
+            "or a mapping, got [1]",
+        ),
+        (
+            "attributes: {basis: {arry: b}}",
+            'recordings.mapping.memory.attributes.basis.arry  unknown key; did you mean "array"?',
+        ),
     ],
 )
 def test_bad_mappings_are_refused_by_the_config(tmp_path: Path, text: str, sentence: str) -> None:
@@ -300,3 +312,5 @@ def test_bad_mappings_are_refused_by_the_config(tmp_path: Path, text: str, sente
     lines = [line for line in str(caught.value).splitlines() if sentence in line]
     assert lines, str(caught.value)
     assert lines[0].startswith(f"{path}:5  ")
+    about = sentence.split("  ")[0]
+    assert sum(f"  {about}" in line for line in str(caught.value).splitlines()) == 1
