@@ -137,17 +137,18 @@ def scan_starts(
     whole = fit_rise(rounds, probability, variance, deviations)
     fits, firsts, parts = [whole], [float(rounds[0]) if len(rounds) else np.nan], []
     later_limit = np.inf
+    critical = critical_values(rounds, FREEDOM) if whole.status != "no data" else None
     for number in FIRST_ROUNDS[1:]:
         later = slice(number - 1, None)
         if whole.status == "no data" or len(rounds[later]) < FEWEST_ROUNDS:
             break
         one = (rounds[later], probability[later], variance[later], deviations[:, later])
-        fits.append(fit_rise(*one))
+        # The critical values of all rounds: those of fewer are a few percent lower.
+        fits.append(fit_rise(*one, critical))
         firsts.append(float(one[0][0]))
         parts.append(_part_of(whole.curve(one[0]), *one[1:]))
         if number == FIRST_ROUNDS[1]:
             # Counted from its own first round, the amplitude is the rise that is still to come.
-            critical = critical_values(one[0], FREEDOM)
             later_limit = fit_rise(one[0] - firsts[-1], *one[1:], critical).amplitude_limit
     table, first = np.array(parts).reshape(-1, 2), np.array(firsts)
     freedom = Sandwich(1 / variance, deviations).freedom

@@ -28,6 +28,7 @@ from leakpipe.rates.reported import (
     role_estimates,
 )
 from leakpipe.rates.roles import ROLES, data_role, expected_leaked, measure_role
+from leakpipe.rates.shapes import shape_report
 from leakpipe.rates.transport import transport_excess
 
 
@@ -71,6 +72,8 @@ def rates(
     variables |= qubit_estimates(roles)
     variables |= check_estimates(per_check)
     variables |= drawn_curves(detection, curves, mean_rise, same, pairs)
+    shape, shape_findings = shape_report(curves)
+    variables |= shape
     joint = joint_model(readout, curves, settings)
     variables |= joint_estimates(joint)
     if settings.parameters:
@@ -104,5 +107,5 @@ def rates(
         },
         attrs={"convention": "discrete, per round: p[r+1] = p[r] + G (1 - p[r]) - S p[r]"},
     )
-    findings = rate_findings(out, mean_rise, same, transport_z, layout)
+    findings = [*rate_findings(out, mean_rise, same, transport_z, layout), *shape_findings]
     return with_findings(out, [*findings, *joint_findings(joint, roles, bool(settings.parameters))])
