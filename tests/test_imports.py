@@ -44,6 +44,7 @@ LABELLED_HELPERS = {
     "rates/jointly.py",
     "rates/reported.py",
     "rates/roles.py",
+    "rates/shapes.py",
     "rates/transport.py",
 }
 """Modules beside a `stage.py` that work on its labelled datasets, as the architecture page says."""
