@@ -58,7 +58,7 @@ def finished(small_epoch: Path, tmp_path_factory: pytest.TempPathFactory) -> Fin
     )
     done = leakpipe("run", config)
     assert done.returncode == 0, done.stderr
-    (folder,) = (home / "results").iterdir()
+    (folder,) = (path for path in (home / "results").iterdir() if path.is_dir())
     summary = json.loads((folder / "summary.json").read_text())
     return Finished(folder, home / "log.jsonl", done.stdout, done.stderr, summary)
 
