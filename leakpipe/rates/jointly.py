@@ -70,8 +70,11 @@ def _rounds(readout: xr.Dataset, plain: NDArray[np.bool_]) -> Curve | None:
     total = weight.sum(axis=0)
     mean = np.nansum(value * weight, axis=0) / np.maximum(total, 1.0)
     # Batches of one recording, summed over recordings: leakage of one shot lasts for rounds.
-    count = np.isfinite(batches).sum(axis=1)
-    spread = np.nanvar(batches, axis=1, ddof=1) / np.maximum(count, 1)
+    there = np.isfinite(batches)
+    count = there.sum(axis=1)
+    centre = np.where(there, batches, 0.0).sum(axis=1) / np.maximum(count, 1)
+    square = np.where(there, batches - centre[:, None], 0.0) ** 2
+    spread = square.sum(axis=1) / np.maximum(count - 1, 1) / np.maximum(count, 1)
     error = np.sqrt(np.nansum(spread * weight**2, axis=0)) / np.maximum(total, 1.0)
     return _curve(np.arange(1.0, len(mean) + 1), mean, error)
 

@@ -18,15 +18,14 @@ import numpy as np
 import pytest
 import xarray as xr
 import yaml
-from conftest import SCENARIO
-from tests_shared import leakpipe
+from tests_shared import SCENARIO, leakpipe
 
 ConfigFor = Callable[..., Path]
 
 
 def no_result_in(folder: Path) -> bool:
     """Nothing was written: no result folder and no leftover of one."""
-    return not folder.exists() or not [p for p in folder.iterdir() if p.is_dir()]
+    return not list(folder.glob("*/summary.json")) + list(folder.glob(".*.new-*"))
 
 
 @dataclass(frozen=True)
@@ -58,7 +57,7 @@ def finished(small_epoch: Path, tmp_path_factory: pytest.TempPathFactory) -> Fin
     )
     done = leakpipe("run", config)
     assert done.returncode == 0, done.stderr
-    (folder,) = (path for path in (home / "results").iterdir() if path.is_dir())
+    (folder,) = (path.parent for path in (home / "results").glob("*/summary.json"))
     summary = json.loads((folder / "summary.json").read_text())
     return Finished(folder, home / "log.jsonl", done.stdout, done.stderr, summary)
 
