@@ -39,6 +39,8 @@ EXCEPTIONS = {("share", "logical"): {"leakpipe.logical.per_round"}}
 """What one stage may take from another: the fit that both give the same meaning."""
 
 LABELLED_HELPERS = {
+    "readout/model.py",
+    "readout/tuning.py",
     "rates/curves.py",
     "rates/doubts.py",
     "rates/jointly.py",
