@@ -39,6 +39,7 @@ EXCEPTIONS = {("share", "logical"): {"leakpipe.logical.per_round"}}
 """What one stage may take from another: the fit that both give the same meaning."""
 
 LABELLED_HELPERS = {
+    "readout/counting.py",
     "readout/model.py",
     "readout/tuning.py",
     "rates/curves.py",
