@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -185,7 +185,11 @@ def _estimate(fit: PerRound | None, basis: str) -> Estimate:
             "needs two or more different numbers of rounds with a logical fidelity above its noise"
         )
     freedom = fit.freedom if fit.scatter > 0 else None
-    return Estimate.from_error(fit.error_per_round, fit.error, basis, freedom=freedom)
+    raw = Estimate.from_error(fit.error_per_round, fit.error, basis, freedom=freedom)
+    if raw.low is None or raw.high is None:
+        return raw
+    # A probability per round of flipping lies between 0 and 1/2.
+    return replace(raw, low=max(raw.low, 0.0), high=min(raw.high, 0.5))
 
 
 def _amplitude(fit: PerRound | None, basis: str) -> Estimate:

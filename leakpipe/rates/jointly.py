@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -9,7 +10,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from leakpipe.config.rates import RatesSettings
-from leakpipe.estimates import Estimate, store
+from leakpipe.estimates import Estimate, read, store
 from leakpipe.findings import Finding, Severity
 from leakpipe.rates.curves import Curves
 from leakpipe.rates.joint import Curve, JointFit, fit_joint
@@ -113,12 +114,25 @@ def joint_estimates(joint: JointFit | None) -> dict[str, Any]:
     return out
 
 
-def roles_by_joint(joint: JointFit | None) -> dict[str, Any]:
-    """Return the roles' reported estimates from the joint model, where the config asked for it."""
+def roles_by_joint(
+    variables: Mapping[str, Any], joint: JointFit | None, asked: Sequence[str]
+) -> dict[str, Any]:
+    """Return the reported estimates per role with those of the asked roles from the joint model.
+
+    Asked for by the config, or where single qubits have not settled and their mean says nothing.
+    """
     out: dict[str, Any] = {}
     for name in ("steady_leakage", "injection", "seepage"):
-        values = [_estimate(joint, name, role) for role in ROLES]
-        out |= store(name, ("role",), values, units="1" if "steady" in name else "per round")
+        units = "1" if "steady" in name else "per round"
+        fitted = xr.Dataset(
+            {key: variables[key] for key in store(name, ("role",), [])},
+            coords={"role": list(ROLES)},
+        )
+        values = [
+            _estimate(joint, name, role) if role in asked else read(fitted, name, {"role": role})
+            for role in ROLES
+        ]
+        out |= store(name, ("role",), values, units=units)
     return out
 
 

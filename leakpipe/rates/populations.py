@@ -20,6 +20,12 @@ FloatArray = NDArray[np.float64]
 SPREAD_START = 0.1
 SPREAD_LEAST = 0.02
 """Least spread of lam between qubits: the same lam for all is never assumed exactly."""
+SPREAD_MOST = 0.1
+"""Largest spread of lam: beyond it a noisy qubit's steady level and memory run away together. Our
+choice; at a settling time of 5 rounds it is a spread from 3 to 10."""
+MEMORY_BELIEF = (0.6, 0.3)
+"""Weak normal prior of mu (mean, deviation), ours: data that tell lam to .03 move it by 1 % of
+their error, data that tell nothing do not send the steady level to infinity."""
 SPREAD_STEPS = 25
 START_DEVIATION = 0.1
 """Prior deviation of the common p0 / p_ss around a cold start: a few percent are ordinary
@@ -126,20 +132,31 @@ def fit_role(
         Standard deviation of the unknown probability to go from 1 to 2 during the readout, which
         looks like leakage common to all rounds and is invisible to every fit test.
     """
+    belief = _believed(memory_prior)
     spread = SPREAD_START
     theta = _start(series, qubits)
     for _ in range(SPREAD_STEPS):
-        theta, normal = _solve(series, qubits, theta, spread, memory_prior, free_start)
+        theta, normal = _solve(series, qubits, theta, spread, belief, free_start)
         inverse = np.linalg.pinv(normal, hermitian=True)
         lam, mu = theta[qubits : 2 * qubits], theta[2 * qubits]
         index = np.arange(qubits, 2 * qubits)
         gap = inverse[index, index] + inverse[-2, -2] - 2 * inverse[index, -2]
         new = float(np.sqrt(np.mean((lam - mu) ** 2 + np.maximum(gap, 0.0))))
-        new = max(new, SPREAD_LEAST)
+        new = float(np.clip(new, SPREAD_LEAST, SPREAD_MOST))
         if abs(new - spread) < 1e-4:
             break
         spread = new
-    return _finish(series, qubits, theta, spread, memory_prior, free_start, excitation)
+    return _finish(series, qubits, theta, spread, belief, free_start, excitation)
+
+
+def _believed(memory_prior: tuple[float, float] | None) -> tuple[float, float]:
+    """Return what is known of mu together with the weak prior, value and variance."""
+    value, deviation = MEMORY_BELIEF
+    if memory_prior is None:
+        return value, deviation**2
+    known, variance = memory_prior
+    weight, own = 1 / variance, 1 / deviation**2
+    return (known * weight + value * own) / (weight + own), 1 / (weight + own)
 
 
 def _start(series: Series, qubits: int) -> FloatArray:
@@ -172,12 +189,12 @@ def _prior_rows(
     qubits: int,
     theta: FloatArray,
     spread: float,
-    memory_prior: tuple[float, float] | None,
+    memory_prior: tuple[float, float],
     free_start: bool,
 ) -> tuple[FloatArray, FloatArray]:
     """Return residuals and slopes of lam_k ~ N(mu, s^2), of what is known of mu, and of p0."""
     size = 2 * qubits + 2
-    rows = qubits + 1 + (memory_prior is not None)
+    rows = qubits + 2
     residual, slopes = np.zeros(rows), np.zeros((rows, size))
     residual[:qubits] = (theta[qubits : 2 * qubits] - theta[2 * qubits]) / spread
     slopes[np.arange(qubits), qubits + np.arange(qubits)] = 1 / spread
@@ -185,10 +202,9 @@ def _prior_rows(
     if not free_start:
         residual[qubits] = theta[-1] / START_DEVIATION
         slopes[qubits, -1] = 1 / START_DEVIATION
-    if memory_prior is not None:
-        value, variance = memory_prior
-        residual[-1] = (theta[2 * qubits] - value) / np.sqrt(variance)
-        slopes[-1, 2 * qubits] = 1 / np.sqrt(variance)
+    value, variance = memory_prior
+    residual[-1] = (theta[2 * qubits] - value) / np.sqrt(variance)
+    slopes[-1, 2 * qubits] = 1 / np.sqrt(variance)
     return residual, slopes
 
 
@@ -197,7 +213,7 @@ def _solve(
     qubits: int,
     theta: FloatArray,
     spread: float,
-    memory_prior: tuple[float, float] | None,
+    memory_prior: tuple[float, float],
     free_start: bool,
 ) -> tuple[FloatArray, FloatArray]:
     sigma = np.sqrt(series.variance)
@@ -228,7 +244,7 @@ def _normal(
     qubits: int,
     theta: FloatArray,
     spread: float,
-    memory_prior: tuple[float, float] | None,
+    memory_prior: tuple[float, float],
     free_start: bool,
 ) -> FloatArray:
     _, jacobian = _model(series, qubits, theta)
@@ -242,7 +258,7 @@ def _finish(
     qubits: int,
     theta: FloatArray,
     spread: float,
-    memory_prior: tuple[float, float] | None,
+    memory_prior: tuple[float, float],
     free_start: bool,
     excitation: float,
 ) -> RoleFit:

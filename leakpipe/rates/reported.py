@@ -195,6 +195,12 @@ def qubit_estimates(roles: dict[str, Role]) -> dict[Any, Any]:
                 for values in columns.values():
                     values.append(Estimate.unknown(reason or one.basis))
                 continue
+            if one.unsettled[row]:
+                still = f"still building up after {one.longest} rounds, the longest run"
+                for values in columns.values():
+                    values.append(Estimate.unknown(still))
+                row += 1
+                continue
             fit, p, lam = one.fit, one.fit.level[row], one.fit.memory[row]
             basis = one.basis
             if fit.own_weight[row] < 0.5:

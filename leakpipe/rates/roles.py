@@ -12,6 +12,7 @@ from leakpipe.config.rates import RatesSettings
 from leakpipe.rates.populations import START_DEVIATION, RoleFit, Series, fit_role
 
 ROLES = ("data", "measure")
+HALF = 0.5
 START_RANGE = 3.0
 """Standard errors (root of the gain in chi-square) by which a free population at round 0 must fit
 better than a nearly cold start."""
@@ -21,7 +22,11 @@ FloatArray = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Role:
-    """One role's fit and draws, or the reason why there is none."""
+    """One role's fit and draws, or the reason why there is none.
+
+    `unsettled` tells which fitted qubits had not covered half of their way to the steady level by
+    the end of the longest run: level and memory then cannot be told apart.
+    """
 
     names: tuple[str, ...]
     fit: RoleFit | None
@@ -29,6 +34,8 @@ class Role:
     memories: FloatArray
     basis: str
     reasons: tuple[str, ...]
+    unsettled: NDArray[np.bool_]
+    longest: int
 
 
 def measure_role(readout: xr.Dataset, settings: RatesSettings, rng: np.random.Generator) -> Role:
@@ -162,7 +169,8 @@ def _no_role(
 ) -> Role:
     empty = np.full((settings.draws, len(names)), np.nan)
     texts = tuple(reason or "leaked population not identifiable" for reason in reasons)
-    return Role(names, None, empty, empty, texts[0] if texts else "no qubits", texts)
+    nothing = np.zeros(0, dtype=bool)
+    return Role(names, None, empty, empty, texts[0] if texts else "no qubits", texts, nothing, 0)
 
 
 def _fitted(
@@ -197,7 +205,9 @@ def _fitted(
     full_levels = np.full((settings.draws, len(names)), np.nan)
     full_memories = full_levels.copy()
     full_levels[:, usable], full_memories[:, usable] = levels, memories
-    return Role(names, fit, full_levels, full_memories, basis, tuple(reasons))
+    longest = int(series.rounds.max())
+    unsettled = fit.memory**longest > HALF
+    return Role(names, fit, full_levels, full_memories, basis, tuple(reasons), unsettled, longest)
 
 
 def expected_leaked(role: Role, rounds: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:

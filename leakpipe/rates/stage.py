@@ -76,8 +76,8 @@ def rates(
     variables |= shape
     joint = joint_model(readout, curves, settings)
     variables |= joint_estimates(joint)
-    if settings.parameters:
-        variables |= roles_by_joint(joint)
+    by_joint = [r for r in ROLES if settings.parameters or roles[r].unsettled.any()]
+    variables |= roles_by_joint(variables, joint, by_joint)
     transport, transport_z = transport_excess(detection, readout, layout)
     variables |= store("transport", (), transport, units="per leaked reading")
     variables["transport_z"] = ((), transport_z, {"units": "1"})
