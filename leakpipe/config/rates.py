@@ -47,7 +47,7 @@ class RatesSettings(Section):
     come from the joint model; without, it is a cross-check of the fit per qubit."""
     draws: Annotated[int, Field(ge=100)] = 400
     """Random draws of the fitted rates that later stages carry as their errors."""
-    readout_excitation: Annotated[float, Field(ge=0, lt=0.1)] = 5e-4
+    readout_excitation: Annotated[float, Field(ge=0, lt=0.1)] | None = None
     """How large the probability to go from 1 to 2 during the readout may be; it looks like leakage
-    and no fit can tell, so it widens every leaked population (level of an average device in the
-    prototype study)."""
+    and no fit can tell, so it widens every leaked population. By default a twentieth of the fitted
+    decay from 1 to 0, and 5e-4 at least."""

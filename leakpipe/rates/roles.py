@@ -13,6 +13,10 @@ from leakpipe.rates.populations import START_DEVIATION, RoleFit, Series, fit_rol
 
 ROLES = ("data", "measure")
 HALF = 0.5
+LEAST_EXCITATION = 5e-4
+EXCITATION_PER_DECAY = 0.05
+"""Probability 1 to 2 during the readout over that of 1 to 0: .02, .04 and .09 on the good, average
+and poor reference devices of the prototype study."""
 START_RANGE = 3.0
 """Standard errors (root of the gain in chi-square) by which a free population at round 0 must fit
 better than a nearly cold start."""
@@ -72,7 +76,8 @@ def measure_role(readout: xr.Dataset, settings: RatesSettings, rng: np.random.Ge
         replicas=copies[:, rows, columns],
     )
     basis = f"leaked readings of {len(np.unique(rows))} rounds, {int(plain.sum())} recordings"
-    return _fitted(series, names, usable, reasons, basis, None, settings, rng)
+    excitation = _excitation(readout, names, settings)
+    return _fitted(series, names, usable, reasons, basis, None, settings, rng, excitation)
 
 
 def data_role(
@@ -129,7 +134,8 @@ def data_role(
     elif durations < 2:
         reason = "one number of rounds and no correlations: settling and steady level not separable"
         return _no_role(names, [reason] * len(names), settings)
-    return _fitted(series, names, usable, reasons, basis, prior, settings, rng)
+    excitation = _excitation(readout, names, settings)
+    return _fitted(series, names, usable, reasons, basis, prior, settings, rng, excitation)
 
 
 def _even_error(error: FloatArray, shots: NDArray[np.int64]) -> FloatArray:
@@ -142,6 +148,15 @@ def _even_error(error: FloatArray, shots: NDArray[np.int64]) -> FloatArray:
     number = np.broadcast_to(shots.reshape(-1, *(1,) * (error.ndim - 1)), error.shape)
     per_shot = np.nanmean(np.where(error > 0, error**2 * number, np.nan), axis=over)
     return np.where(np.isfinite(error), np.sqrt(per_shot / number), np.nan)
+
+
+def _excitation(readout: xr.Dataset, names: tuple[str, ...], settings: RatesSettings) -> float:
+    """Return how large the excitation from 1 to 2 during the readout may be, for a role."""
+    if settings.readout_excitation is not None:
+        return settings.readout_excitation
+    decay = readout.sel(qubit=list(names))["decay"].values if "decay" in readout else np.zeros(0)
+    known = decay[np.isfinite(decay)]
+    return max(LEAST_EXCITATION, EXCITATION_PER_DECAY * float(known.mean()) if len(known) else 0.0)
 
 
 def _mixing(memory: float, measure: Role, closing: FloatArray) -> float:
@@ -182,6 +197,7 @@ def _fitted(
     prior: tuple[float, float] | None,
     settings: RatesSettings,
     rng: np.random.Generator,
+    excitation: float,
 ) -> Role:
     place = np.cumsum(usable) - 1
     series = Series(
@@ -193,7 +209,6 @@ def _fitted(
         series.replicas,
     )
     count = int(usable.sum())
-    excitation = settings.readout_excitation
     fit = fit_role(series, count, memory_prior=prior, free_start=False, excitation=excitation)
     warm = fit_role(series, count, memory_prior=prior, free_start=True, excitation=excitation)
     # A flat population may be one that settles at once or one that started settled. The nearly

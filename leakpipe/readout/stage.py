@@ -90,6 +90,11 @@ def readout(
     for row, qubit in enumerate(qubits):
         if qubit in model["qubit"].values:
             assignment[row] = model["assignment"].sel(qubit=qubit).values
+    fallen = np.full(len(qubits), np.nan)
+    for row, qubit in enumerate(qubits):
+        if qubit in model["qubit"].values:
+            fallen[row] = float(model["decay"].sel(qubit=qubit)[0])
+    variables["decay"] = ("qubit", fallen, {"units": "1", "long_name": "decay 1 to 0 in readout"})
     variables["assignment"] = (("qubit", "state", "label"), assignment)
     frames = [frame for frame, _, _ in reduced]
     out = xr.Dataset(
