@@ -49,6 +49,7 @@ LABELLED_HELPERS = {
     "rates/roles.py",
     "rates/shapes.py",
     "rates/transport.py",
+    "share/inputs.py",
 }
 """Modules beside a `stage.py` that work on its labelled datasets, as the architecture page says."""
 CORE_LIBRARIES = {"numpy", "scipy", "numba"}

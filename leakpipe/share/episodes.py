@@ -45,14 +45,19 @@ class Episodes:
         return float(np.clip((each * weight).sum() / weight.sum(), 1e-3, 1 - 1e-6))
 
     @property
-    def starts(self) -> float:
-        """Episodes that start per round over all data qubits: G times the unleaked population.
+    def starts_of_each(self) -> FloatArray:
+        """Episodes that start per round on each data qubit: G times the unleaked population.
 
         G is the population that a round leaves leaked, so an episode that ends in the round it
         began in is not counted; counting those too (an earlier form did) gave 15 to 20 % too much.
         """
         steady = self.injection / (self.injection + self.seepage)
-        return float(np.sum(self.injection * (1 - steady)))
+        return np.asarray(self.injection * (1 - steady))
+
+    @property
+    def starts(self) -> float:
+        """Episodes that start per round over all data qubits."""
+        return float(self.starts_of_each.sum())
 
 
 def cost(age: FloatArray, full: float, memory: float) -> FloatArray:
@@ -65,6 +70,26 @@ def closing_cost(rounds: int, ending: float, full: float, memory: float) -> floa
     age = np.arange(1, rounds + 1, dtype=float)
     weight = (1 - ending) ** age
     return float(np.sum(weight * cost(age, full, memory)) / weight.sum())
+
+
+def growth(ages: int, ending: float, memory: float) -> FloatArray:
+    """Return what leaks that began 1 .. `ages` rounds before the end cost, over kappa_inf, (ages,).
+
+    Mean over how long they lasted: (1 - g)^(m-1) (1 - rho^m) + sum_{L<m} g (1 - g)^(L-1)
+    (1 - rho^L).
+
+    Parameters
+    ----------
+    ages
+        Largest age m.
+    ending, memory
+        g and rho.
+    """
+    age = np.arange(1, ages + 1, dtype=float)
+    still_open = (1 - ending) ** (age - 1) * cost(age, 1.0, memory)
+    # A leak of greatest possible age m has ended by then at an age below m.
+    ended = np.cumsum(ending * still_open) - ending * still_open
+    return np.asarray(still_open + ended)
 
 
 def hazard(
@@ -83,11 +108,5 @@ def hazard(
     full, memory
         kappa_inf and rho of the cost of a data episode.
     """
-    g = episodes.ending
-    age = np.arange(1, rounds + 1, dtype=float)
-    kappa = cost(age, full, memory)
-    still_open = (1 - g) ** (age - 1) * kappa
-    # An episode of greatest possible age a has ended by then at an age below a.
-    ended = np.cumsum(g * still_open) - g * still_open
-    data = 2 * episodes.starts * float(np.sum(still_open + ended))
+    data = 2 * episodes.starts * full * float(growth(rounds, episodes.ending, memory).sum())
     return 2 * measure_cost * episodes.measure_leaked * rounds + data

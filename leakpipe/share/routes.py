@@ -67,6 +67,12 @@ class Route:
         return Estimate.from_error(self.share, self.error, self.basis)
 
 
+def preferred(routes: Sequence[Route]) -> Route | None:
+    """Return the route whose number is reported: measured costs before inferred ones."""
+    by_name = {route.name: route for route in routes}
+    return next((by_name[name] for name in PREFERENCE if name in by_name), None)
+
+
 def combine(routes: Sequence[Route], *, transport: float | None) -> tuple[Estimate, list[Finding]]:
     """Return the reported share and what the routes say about each other.
 
@@ -78,8 +84,7 @@ def combine(routes: Sequence[Route], *, transport: float | None) -> tuple[Estima
         Relative over-count by leakage that moves between qubits, where that was seen; the number
         then becomes a range.
     """
-    by_name = {route.name: route for route in routes}
-    best = next((by_name[name] for name in PREFERENCE if name in by_name), None)
+    best = preferred(routes)
     if best is None:
         return Estimate.unknown("no route to the share could be followed"), []
     findings = []
