@@ -125,6 +125,9 @@ def share(
         },
         attrs={"range_of_rounds": logical.attrs["range_of_rounds"], "caution": CAUTION},
     )
+    if not logical["injected"].values.any():
+        # A route that nobody set out on is not worth a "cannot say" every night.
+        out = out.drop_sel(route=["injected"])
     return with_findings(out, findings)
 
 
