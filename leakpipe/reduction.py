@@ -114,7 +114,7 @@ def reduce_each(
     if config.compute.scheduler is not None:
         from distributed import Client
 
-        with Client(config.compute.scheduler) as client:  # type: ignore[no-untyped-call]
+        with Client(config.compute.scheduler) as client:
             waiting = [client.submit(reduce_recording, one, model, config) for one in recordings]
             for future in waiting:
                 yield future.result()

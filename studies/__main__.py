@@ -24,7 +24,8 @@ def run(folder: Path, names: list[str]) -> int:
         print(f"== {package}.{name}", flush=True)
         start = time.monotonic()
         code = importlib.import_module(f"{package}.{name}").main()
-        print(f"-- {package}.{name}: {'ok' if not code else 'FAILED'}, {time.monotonic() - start:.0f} s")
+        verdict = "ok" if not code else "FAILED"
+        print(f"-- {package}.{name}: {verdict}, {time.monotonic() - start:.0f} s")
         if code:
             failed.append(name)
     print(f"{len(names or have_main) - len(failed)} passed, {len(failed)} failed")

@@ -131,7 +131,7 @@ def _judge(value: float, error: float, estimate: dict[str, Any]) -> tuple[bool, 
 def report(table: dict[str, list[tuple[bool, bool, float]]]) -> int:
     """Print coverage per quantity; return 0 if the total holds."""
     hits = total = 0
-    print(f"{'quantity':34s} {'inside':>7s} {'of':>5s} {'cover':>6s} {'mean pull':>10s} {'rms pull':>9s}")
+    print(f"{'quantity':34s}  inside    of  cover  mean pull  rms pull")
     for name, cells in table.items():
         with_interval = [cell for cell in cells if cell[1]]
         inside = sum(cell[0] for cell in with_interval)
@@ -139,15 +139,16 @@ def report(table: dict[str, list[tuple[bool, bool, float]]]) -> int:
         mean = pulls.mean() if len(pulls) else np.nan
         rms = np.sqrt((pulls**2).mean()) if len(pulls) else np.nan
         share = inside / max(len(with_interval), 1)
-        print(
-            f"{name:34s} {inside:7d} {len(with_interval):5d} {share:6.3f} {mean:10.2f} {rms:9.2f}"
-            f"{'' if len(with_interval) == len(cells) else f'   ({len(cells) - len(with_interval)} unknown)'}"
-        )
+        unknown = len(cells) - len(with_interval)
+        note = f"   ({unknown} unknown)" if unknown else ""
+        counts = f"{inside:7d} {len(with_interval):5d} {share:6.3f}"
+        print(f"{name:34s} {counts} {mean:10.2f} {rms:9.2f}{note}")
         hits, total = hits + inside, total + len(with_interval)
     coverage = hits / max(total, 1)
     slack = 3 * np.sqrt(0.95 * 0.05 / max(total, 1))
     holds = 0.90 - slack <= coverage <= 0.99 + slack
-    print(f"all: {hits} of {total} inside, {coverage:.3f} (required .90 to .99): {'ok' if holds else 'FAILED'}")
+    verdict = "ok" if holds else "FAILED"
+    print(f"all: {hits} of {total} inside, {coverage:.3f} (required .90 to .99): {verdict}")
     return 0 if holds else 1
 
 
