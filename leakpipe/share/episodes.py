@@ -2,10 +2,11 @@
 
 A leak episode of a data qubit is first seen at the end of the round it begins in (age 1), ends with
 probability g at the start of every further round, and costs kappa(L) if it reached age L (the
-closing readout sees those still open). The hazard that data leakage adds to -ln(1 - 2P) after R
-rounds is Lambda(R). Assumes rare independent episodes with geometric lifetimes that stay on their
-qubit; an episode that ended by seepage costs what one costs that is open at the end. (Derived for
-leakpipe; tested against counterfactual simulation in studies/share.py.)
+closing readout sees those still open). The hazard
+that leakage adds to ln(1 - 2P) after R rounds is Lambda(R). Assumes rare independent episodes with
+geometric lifetimes that stay on their qubit; an episode that ended by seepage costs what one costs
+that is open at the end. (Derived for leakpipe; tested against counterfactual simulation in
+studies/share.py.)
 """
 
 from __future__ import annotations
@@ -26,10 +27,13 @@ class Episodes:
     ----------
     injection, seepage
         (data,) G and S per round.
+    measure_leaked
+        Mean number of leaked measure qubits per round.
     """
 
     injection: FloatArray
     seepage: FloatArray
+    measure_leaked: float
 
     @property
     def ending(self) -> float:
@@ -88,16 +92,21 @@ def growth(ages: int, ending: float, memory: float) -> FloatArray:
     return np.asarray(still_open + ended)
 
 
-def hazard(rounds: int, episodes: Episodes, full: float, memory: float) -> float:
-    """Return Lambda(R), what leaked data qubits add to -ln(1 - 2P).
+def hazard(
+    rounds: int, episodes: Episodes, measure_cost: float, full: float, memory: float
+) -> float:
+    """Return Lambda(R), what leakage adds to -ln(1 - 2P).
 
     Parameters
     ----------
     rounds
         R.
     episodes
-        Rates of the data qubits.
+        Rates of the data qubits and population of the measure qubits.
+    measure_cost
+        kappa_A, cost of one leaked measure-qubit round.
     full, memory
-        kappa_inf and rho of the cost of an episode.
+        kappa_inf and rho of the cost of a data episode.
     """
-    return 2 * episodes.starts * full * float(growth(rounds, episodes.ending, memory).sum())
+    data = 2 * episodes.starts * full * float(growth(rounds, episodes.ending, memory).sum())
+    return 2 * measure_cost * episodes.measure_leaked * rounds + data

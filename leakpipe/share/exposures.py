@@ -23,24 +23,19 @@ class ExposureSums:
     ----------
     measure
         (shot,) uint32: posterior number of leaked rounds, summed over measure qubits, in 1/1000.
-    begun
-        (shot,) uint32: posterior number of leaked rounds that follow a round without, in 1/1000.
     closing
         (shot, data) uint8: posterior of each data qubit to be leaked at the end, in 1/255.
     """
 
     measure: NDArray[np.uint32]
-    begun: NDArray[np.uint32]
     closing: NDArray[np.uint8]
 
 
 def partial(readings: Readings, frame: Frame) -> ExposureSums:
     """Return the exposures of some shots."""
     total = readings.leak.sum(axis=(1, 2), dtype=np.float64)
-    again = np.einsum("srm,srm->s", readings.leak[:, 1:], readings.leak[:, :-1], dtype=np.float64)
     return ExposureSums(
         np.rint(total * MEASURE_STEPS).astype(np.uint32),
-        np.rint((total - again) * MEASURE_STEPS).astype(np.uint32),
         np.rint(readings.final_leak * CLOSING_STEPS).astype(np.uint8),
     )
 
@@ -48,7 +43,5 @@ def partial(readings: Readings, frame: Frame) -> ExposureSums:
 def merge(a: ExposureSums, b: ExposureSums) -> ExposureSums:
     """Join two runs of consecutive shots, `a` before `b`."""
     return ExposureSums(
-        np.concatenate([a.measure, b.measure]),
-        np.concatenate([a.begun, b.begun]),
-        np.concatenate([a.closing, b.closing]),
+        np.concatenate([a.measure, b.measure]), np.concatenate([a.closing, b.closing])
     )

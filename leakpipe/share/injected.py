@@ -134,20 +134,23 @@ def redrawn(runs: Injections, rng: np.random.Generator) -> Injections:
     )
 
 
-def injected_hazard(rounds: int, episodes: Episodes, kernel: Kernel) -> float:
-    """Return Lambda(R), what leaked data qubits add to -ln(1 - 2P), with measured costs.
+def injected_hazard(rounds: int, episodes: Episodes, kernel: Kernel, measure_cost: float) -> float:
+    """Return Lambda(R), what leakage adds to -ln(1 - 2P), with measured costs.
 
     Parameters
     ----------
     rounds
         R.
     episodes
-        Rates of the data qubits.
+        Rates of the data qubits and population of the measure qubits.
     kernel
-        Their costs.
+        Costs of the data qubits.
+    measure_cost
+        kappa_A.
     """
     total = float(growth(rounds, episodes.ending, kernel.memory).sum())
-    return 2 * float(episodes.starts_of_each @ kernel.full) * total
+    data = 2 * float(episodes.starts_of_each @ kernel.full) * total
+    return 2 * measure_cost * episodes.measure_leaked * rounds + data
 
 
 def by_age(runs: Injections, kernel: Kernel | None, ending: float) -> FloatArray:

@@ -40,7 +40,6 @@ def leakage_of(
     """Return rates of the data qubits and the population of the measure qubits, with draws."""
     picked = rates.sel(qubit=list(layout.data))
     value, error = _measure_leaked(readout)
-    error = max(error, value * _relative_error(rates, layout))
     injection = picked["injection_draw"].values
     return Leakage(
         picked["qubit_injection"].values,
@@ -50,21 +49,6 @@ def leakage_of(
         picked["seepage_draw"].values,
         value + error * rng.normal(size=len(injection)),
     )
-
-
-def _relative_error(rates: xr.Dataset, layout: Layout) -> float:
-    """Return the relative error of the measure qubits' summed steady level.
-
-    It holds what the rates stage knows about errors that no replica of the calibration shows, such
-    as an excitation during the readout that looks like leakage.
-    """
-    picked = rates.sel(qubit=list(layout.measure))
-    injection, seepage = picked["injection_draw"].values, picked["seepage_draw"].values
-    with np.errstate(divide="ignore", invalid="ignore"):
-        total = (injection / (injection + seepage)).sum(axis=1)
-    total = total[np.isfinite(total)]
-    mean = total.mean() if len(total) > 1 else 0.0
-    return float(total.std(ddof=1) / mean) if mean > 0 else 0.0
 
 
 def _measure_leaked(readout: xr.Dataset) -> tuple[float, float]:
@@ -159,7 +143,6 @@ def shots_of(used: Reduced) -> Shots:
         rounds=rounds.astype(np.int64),
         failed=np.concatenate([outcome.failed for _, _, outcome in used]).astype(float),
         measure=np.concatenate([exposure.measure for _, exposure, _ in used]) / MEASURE_STEPS,
-        begun=np.concatenate([exposure.begun for _, exposure, _ in used]) / MEASURE_STEPS,
         quiet=np.concatenate(quiet),
         loud=np.concatenate([np.pad(one, ((0, 0), (0, slots - one.shape[1]))) for one in loud]),
         cluster=np.concatenate(

@@ -70,13 +70,13 @@ class Leakage:
     @property
     def episodes(self) -> Episodes:
         """The fitted episodes."""
-        return _episodes(self.injection, self.seepage)
+        return _episodes(self.injection, self.seepage, self.measure_leaked)
 
     @property
     def drawn(self) -> list[Episodes]:
         """The episodes of every draw."""
-        both = zip(self.injection_draw, self.seepage_draw, strict=True)
-        return [_episodes(*one) for one in both]
+        draws = zip(self.injection_draw, self.seepage_draw, self.measure_leaked_draw, strict=True)
+        return [_episodes(*one) for one in draws]
 
 
 @dataclass(frozen=True)
@@ -105,16 +105,16 @@ def by_readings(
 ) -> LeakageFree:
     """Return what the costs of leaked readings say."""
 
-    def data(episodes: Episodes, full: float, memory: float) -> FloatArray:
+    def extra(episodes: Episodes, c: float, full: float, memory: float) -> FloatArray:
+        kappa = float((1 - np.exp(c)) / 2)
         kept = float(np.clip(memory, 0.0, LARGEST_MEMORY))
-        return np.array([hazard(int(r), episodes, full, kept) for r in memories.rounds])
+        return np.array([hazard(int(r), episodes, kappa, full, kept) for r in memories.rounds])
 
-    measure, measure_draw, sample = _measure_part(memories, costs, leakage, rng)
-    drawn = [
-        data(one, *theta) for one, theta in zip(leakage.drawn, sample[:, 2:].tolist(), strict=True)
-    ]
-    centre = data(leakage.episodes, costs.full, costs.memory)
-    return _removed(memories, measure + centre, measure_draw + np.array(drawn), rng)
+    drawn = leakage.drawn
+    sample = _costs(costs, len(drawn), rng)
+    hazards = [extra(one, *theta) for one, theta in zip(drawn, sample.tolist(), strict=True)]
+    centre = extra(leakage.episodes, costs.log_measure, costs.full, costs.memory)
+    return _removed(memories, centre, hazards, rng)
 
 
 def by_injection(
@@ -127,48 +127,32 @@ def by_injection(
 ) -> LeakageFree:
     """Return what the measured costs of injected leaks say; measure qubits by their readings."""
 
-    def data(episodes: Episodes, one: Kernel) -> FloatArray:
-        return np.array([injected_hazard(int(r), episodes, one) for r in memories.rounds])
+    def extra(episodes: Episodes, c: float, one: Kernel) -> FloatArray:
+        kappa = float((1 - np.exp(c)) / 2)
+        return np.array([injected_hazard(int(r), episodes, one, kappa) for r in memories.rounds])
 
-    qubits, ending = len(leakage.injection), leakage.episodes.ending
+    qubits = len(leakage.injection)
+    ending = leakage.episodes.ending
     kernels = [fit_kernel(redrawn(runs, rng), qubits, ending) for _ in range(REDRAWN_KERNELS)]
-    measure, measure_draw, _ = _measure_part(memories, costs, leakage, rng)
-    drawn = [
-        data(one, kernels[position % REDRAWN_KERNELS] or kernel)
-        for position, one in enumerate(leakage.drawn)
+    drawn = leakage.drawn
+    sample = _costs(costs, len(drawn), rng)[:, 0]
+    hazards = [
+        extra(one, float(c), kernels[position % REDRAWN_KERNELS] or kernel)
+        for position, (one, c) in enumerate(zip(drawn, sample, strict=True))
     ]
-    centre = data(leakage.episodes, kernel)
-    return _removed(memories, measure + centre, measure_draw + np.array(drawn), rng)
+    centre = extra(leakage.episodes, costs.log_measure, kernel)
+    return _removed(memories, centre, hazards, rng)
 
 
-def _measure_part(
-    memories: Memories, costs: Regression, leakage: Leakage, rng: np.random.Generator
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return what leaked measure qubits add, with draws of it and of all costs.
-
-    The regression sees posteriors; their mean is scaled to the measured population, which is
-    unbiased where posteriors depend on the prior that was chosen for them.
-
-    Returns
-    -------
-    centre, draws, sample
-        (recording,), (draw, recording) and (draw, 4) drawn costs.
-    """
-    mean = np.concatenate([costs.measure, [costs.full, costs.memory]])
-    count = len(leakage.measure_leaked_draw)
-    sample = rng.multivariate_normal(mean, costs.covariance, size=count, method="eigh")
-    row = np.searchsorted(costs.rounds, memories.rounds)
-    per_leak = costs.measure_hazard[row] / max(costs.measure_leaked, LEAST_INJECTION)
-    slope = costs.measure_slope[row] / max(costs.measure_leaked, LEAST_INJECTION)
-    shifted = per_leak + (sample[:, :2] - costs.measure) @ slope.T
-    drawn = leakage.measure_leaked_draw[:, None] * shifted
-    return leakage.measure_leaked * per_leak, drawn, np.asarray(sample)
+def _costs(costs: Regression, count: int, rng: np.random.Generator) -> FloatArray:
+    mean = [costs.log_measure, costs.full, costs.memory]
+    return np.asarray(rng.multivariate_normal(mean, costs.covariance, size=count, method="eigh"))
 
 
 def _removed(
     memories: Memories,
     centre: FloatArray,
-    hazards: FloatArray,
+    hazards: list[FloatArray],
     rng: np.random.Generator,
 ) -> LeakageFree:
     share, fidelity, per_round = _share_of(memories, centre)
@@ -201,5 +185,9 @@ def _share_of(memories: Memories, extra: FloatArray) -> tuple[float, FloatArray,
     return (eps - eps_without) / eps, without, eps_without
 
 
-def _episodes(injection: FloatArray, seepage: FloatArray) -> Episodes:
-    return Episodes(np.maximum(injection, LEAST_INJECTION), np.maximum(seepage, LEAST_SEEPAGE))
+def _episodes(injection: FloatArray, seepage: FloatArray, measure_leaked: float) -> Episodes:
+    return Episodes(
+        np.maximum(injection, LEAST_INJECTION),
+        np.maximum(seepage, LEAST_SEEPAGE),
+        max(float(measure_leaked), 0.0),
+    )

@@ -1,16 +1,11 @@
 """Shot-level regression of the logical outcome on leak exposures.
 
-E[1 - 2 failed] = exp(a_R + c x + b n) prod_k (1 - 2 kappa_F(R) v_k): a free intercept per number of
-rounds, x the posterior number of leaked measure-qubit rounds of the shot, n that of leaks begun
-among them, v_k the posterior of data qubit k to be leaked at the end, kappa_F from the episode
-kernel. Maximum likelihood of the binary outcome; errors from the sandwich over contiguous batches
-(White, Econometrica 50, 1 (1982)). Posteriors at the right prior make the regression unbiased where
-labels would not (Berkson errors).
-
-Why n beside x: a measure qubit leaked for one round costs little, each further round more. With x
-alone the few long leaks set the slope and the sum over all came out 13 % too high (measured with
-true leakage as exposure, distance 3). The likelihood equation of b makes the mean over leaks right
-whatever the shape of their cost.
+E[1 - 2 failed] = exp(a_R + c x) prod_k (1 - 2 kappa_F(R) v_k): a free intercept per number of
+rounds, x the posterior number of leaked measure-qubit rounds of the shot, v_k the posterior of data
+qubit k to be leaked at the end, kappa_F from the episode kernel. Maximum likelihood of the binary
+outcome by Newton steps; errors from the sandwich over contiguous batches (White, Econometrica 50, 1
+(1982)). Posteriors at the right prior make the regression unbiased where labels would not
+(Berkson errors).
 """
 
 from __future__ import annotations
@@ -34,16 +29,7 @@ LARGEST_COST = 0.5
 FULL_PRIOR, MEMORY_PRIOR = (0.3, 0.2), (0.6, 0.3)
 """Weak normal priors of kappa_inf and rho (mean, deviation): few leaked closing readings tell their
 product only. Our choice, wide enough to cover every rehearsed device."""
-BEGIN_PRIOR = 0.2
-"""Deviation of the weak normal prior of b around 0: where leaks last one round, x and n are the
-same. Our choice; fitted values were below .1 on every rehearsed device."""
-PRIOR_MEAN = np.array([0.0, 0.0, FULL_PRIOR[0], MEMORY_PRIOR[0]])
-PRIOR_WEIGHT = np.array([0.0, BEGIN_PRIOR**-2, FULL_PRIOR[1] ** -2, MEMORY_PRIOR[1] ** -2])
-"""Of c, b, kappa_inf, rho: mean and inverse variance; c needs none."""
-TINY = 1e-9
 STEP = 1e-4
-COSTS = 4
-"""Parameters besides the intercepts: c, b, kappa_inf, rho."""
 
 
 @dataclass(frozen=True)
@@ -60,8 +46,6 @@ class Shots:
         (shot,) 0 or 1.
     measure
         (shot,) posterior number of leaked measure-qubit rounds.
-    begun
-        (shot,) posterior number of leaked rounds that follow a round without.
     quiet
         (shot,) sum of the closing posteriors below QUIET.
     loud
@@ -74,7 +58,6 @@ class Shots:
     rounds: NDArray[np.int64]
     failed: FloatArray
     measure: FloatArray
-    begun: FloatArray
     quiet: FloatArray
     loud: FloatArray
     cluster: NDArray[np.int64]
@@ -86,34 +69,23 @@ class Regression:
 
     Attributes
     ----------
-    measure
-        (2,) c and b.
+    measure_cost
+        kappa_A, cost of a leaked measure-qubit round, (1 - exp(c)) / 2.
     full, memory
         kappa_inf and rho of the cost of a data episode.
     covariance
-        (4, 4) of (c, b, kappa_inf, rho).
-    rounds
-        (group,) numbers of rounds.
-    measure_hazard, measure_slope
-        (group,) what leaked readings of measure qubits add to -ln(1 - 2P), as observed, and (group,
-        2) its slopes with c and b.
-    measure_leaked
-        Posterior number of leaked measure qubits per round, the one that `measure_hazard` is at.
-    measure_cost
-        kappa_A, mean cost of a leaked measure-qubit round.
+        (3, 3) of (c, kappa_inf, rho).
+    log_measure
+        c.
     at_bound
         True if both the full cost and its memory ended on the edge of their ranges.
     """
 
-    measure: FloatArray
+    measure_cost: float
     full: float
     memory: float
     covariance: FloatArray
-    rounds: NDArray[np.int64]
-    measure_hazard: FloatArray
-    measure_slope: FloatArray
-    measure_leaked: float
-    measure_cost: float
+    log_measure: float
     at_bound: bool
 
 
@@ -144,9 +116,8 @@ def fit(shots: Shots, ending: float) -> Regression:
     """
     groups = len(shots.rounds)
     fidelity = np.array([1 - 2 * shots.failed[shots.group == g].mean() for g in range(groups)])
-    begin = np.concatenate([np.log(np.maximum(fidelity, 0.02)), [-0.1, 0.0, 0.25, 0.5]])
-    bounds: list[tuple[float | None, float]] = [(None, 1e-3)] * groups
-    bounds += [(-3.0, 1.0), (-3.0, 3.0), (-LARGEST_COST, LARGEST_COST), (0.0, 0.98)]
+    begin = np.concatenate([np.log(np.maximum(fidelity, 0.02)), [-0.1, 0.25, 0.5]])
+    bounds = [(None, 1e-3)] * groups + [(-3.0, 1.0), (-LARGEST_COST, LARGEST_COST), (0.0, 0.98)]
 
     def loss(theta: FloatArray) -> tuple[float, FloatArray]:
         one = _evaluate(shots, theta, ending)
@@ -155,14 +126,13 @@ def fit(shots: Shots, ending: float) -> Regression:
                 np.bincount(shots.group, one.slope, minlength=groups),
                 [
                     one.slope @ shots.measure,
-                    one.slope @ shots.begun,
                     (one.slope * one.by_cost) @ one.by_full[shots.group],
                     (one.slope * one.by_cost) @ one.by_memory[shots.group],
                 ],
             ]
         )
-        pull, slope = _prior(theta[groups:])
-        gradient[groups:] += slope
+        pull, slope = _prior(theta[groups + 1], theta[groups + 2])
+        gradient[groups + 1 :] += slope
         size = len(shots.failed)
         return -(one.value + pull) / size, -gradient / size
 
@@ -170,35 +140,17 @@ def fit(shots: Shots, ending: float) -> Regression:
         loss, begin, jac=True, method="L-BFGS-B", bounds=bounds, options={"maxiter": 500}
     )
     theta = found.x
-    full, memory = theta[groups + 2 :]
-    hazard, slope = _measure_hazard(shots, theta[groups : groups + 2])
-    shots_of = np.bincount(shots.group, minlength=groups)
-    leaked = float(shots.measure.sum() / (shots_of @ shots.rounds))
-    total = float(shots_of @ hazard) / (2 * max(float(shots.measure.sum()), TINY))
+    covariance = _sandwich(shots, theta, ending, groups)
+    c, full, memory = theta[groups:]
     at_bound = abs(full) > LARGEST_COST - 1e-4 and memory > 0.97
     return Regression(
-        measure=theta[groups : groups + 2],
+        measure_cost=float((1 - np.exp(c)) / 2),
         full=float(full),
         memory=float(memory),
-        covariance=_sandwich(shots, theta, ending, groups),
-        rounds=shots.rounds,
-        measure_hazard=hazard,
-        measure_slope=slope,
-        measure_leaked=leaked,
-        measure_cost=total,
+        covariance=covariance,
+        log_measure=float(c),
         at_bound=bool(at_bound),
     )
-
-
-def _measure_hazard(shots: Shots, measure: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return -ln of the mean of exp(c x + b n) in every group and its slopes with c and b."""
-    groups = len(shots.rounds)
-    factor = np.exp(measure[0] * shots.measure + measure[1] * shots.begun)
-    total = np.bincount(shots.group, factor, minlength=groups)
-    hazard = -np.log(total / np.bincount(shots.group, minlength=groups))
-    columns = (shots.measure, shots.begun)
-    slope = [np.bincount(shots.group, factor * one, minlength=groups) for one in columns]
-    return hazard, -np.stack(slope, axis=1) / total[:, None]
 
 
 @dataclass(frozen=True)
@@ -214,7 +166,7 @@ class _Evaluation:
 
 def _evaluate(shots: Shots, theta: FloatArray, ending: float) -> _Evaluation:
     groups = len(shots.rounds)
-    a, (c, b, full, memory) = theta[:groups], theta[groups:]
+    a, c, full, memory = theta[:groups], theta[groups], theta[groups + 1], theta[groups + 2]
 
     def kernel(f: float, m: float) -> FloatArray:
         return np.array([closing_cost(int(r), ending, f, m) for r in shots.rounds])
@@ -223,7 +175,7 @@ def _evaluate(shots: Shots, theta: FloatArray, ending: float) -> _Evaluation:
     high, low = min(memory + STEP, 0.999), max(memory - STEP, 0.0)
     here = kernel(full, memory)[shots.group]
     factor = np.maximum(1 - 2 * here[:, None] * shots.loud, 1e-9)
-    log_mean = a[shots.group] + c * shots.measure + b * shots.begun - 2 * here * shots.quiet
+    log_mean = a[shots.group] + c * shots.measure - 2 * here * shots.quiet
     log_mean += np.log(factor).sum(axis=1)
     mean = np.exp(np.minimum(log_mean, 0.0))
     probability = np.clip((1 - mean) / 2, LEAST, 1 - LEAST)
@@ -239,36 +191,35 @@ def _evaluate(shots: Shots, theta: FloatArray, ending: float) -> _Evaluation:
     )
 
 
-def _prior(costs: FloatArray) -> tuple[float, FloatArray]:
-    """Return the log prior of (c, b, kappa_inf, rho) and its slope."""
-    gap = (costs - PRIOR_MEAN) * PRIOR_WEIGHT
-    return float(-0.5 * gap @ (costs - PRIOR_MEAN)), -gap
+def _prior(full: float, memory: float) -> tuple[float, FloatArray]:
+    """Return the log prior of (kappa_inf, rho) and its slope."""
+    gap = np.array(
+        [(full - FULL_PRIOR[0]) / FULL_PRIOR[1], (memory - MEMORY_PRIOR[0]) / MEMORY_PRIOR[1]]
+    )
+    return float(-0.5 * gap @ gap), -gap / np.array([FULL_PRIOR[1], MEMORY_PRIOR[1]])
 
 
 def _sandwich(shots: Shots, theta: FloatArray, ending: float, groups: int) -> FloatArray:
-    """Return the covariance of (c, b, kappa_inf, rho): H^-1 (sum of squared scores) H^-1."""
+    """Return the covariance of (c, kappa_inf, rho): H^-1 (sum of cluster score products) H^-1."""
     one = _evaluate(shots, theta, ending)
     count = int(shots.cluster.max()) + 1
-    columns = [
-        one.slope,
-        one.slope * shots.measure,
-        one.slope * shots.begun,
-        one.slope * one.by_cost,
-    ]
+    columns = [one.slope, one.slope * shots.measure, one.slope * one.by_cost]
     sums = np.stack([np.bincount(shots.cluster, x, minlength=count) for x in columns], axis=1)
     products = np.array(
         [[np.bincount(shots.group, x * y, minlength=groups) for y in columns] for x in columns]
     )
     home = np.zeros(count, dtype=np.int64)
     home[shots.cluster] = shots.group
-    expand = np.zeros((groups, len(columns), groups + COSTS))
+    expand = np.zeros((groups, 3, groups + 3))
     for g in range(groups):
         expand[g, 0, g] = 1.0
-        expand[g, 1, groups] = expand[g, 2, groups + 1] = 1.0
-        expand[g, 3, groups + 2] = one.by_full[g]
-        expand[g, 3, groups + 3] = one.by_memory[g]
+        expand[g, 1, groups] = 1.0
+        expand[g, 2, groups + 1] = one.by_full[g]
+        expand[g, 2, groups + 2] = one.by_memory[g]
     scores = np.einsum("ca,cap->cp", sums, expand[home])
     information = np.einsum("abg,gap,gbq->pq", products, expand, expand)
-    prior = np.diag(np.concatenate([np.zeros(groups), PRIOR_WEIGHT]))
-    bread = np.linalg.inv(information + prior + 1e-12 * np.eye(groups + COSTS))
+    prior = np.zeros_like(information)
+    prior[groups + 1, groups + 1] = FULL_PRIOR[1] ** -2
+    prior[groups + 2, groups + 2] = MEMORY_PRIOR[1] ** -2
+    bread = np.linalg.inv(information + prior + 1e-12 * np.eye(groups + 3))
     return np.asarray((bread @ (scores.T @ scores + prior) @ bread)[groups:, groups:])
