@@ -45,7 +45,6 @@ LABELLED_HELPERS = {
     "rates/curves.py",
     "rates/doubts.py",
     "rates/jointly.py",
-    "rates/networked.py",
     "rates/reported.py",
     "rates/roles.py",
     "rates/shapes.py",

@@ -32,10 +32,6 @@ class RatesSettings(Section):
     observation: Literal["outcome random", "detector random"] = "outcome random"
     """What a leaked neighbour randomises: a check's outcome (circuits with reset), or its
     detection events."""
-    picture: Literal["from data", "circuit", "own check"] = "from data"
-    """What a leaked qubit does: in a circuit it makes the outcomes of a data qubit's checks random
-    and strikes its gates' partners; or it flips only the checks it touches. By default what fits
-    the correlations."""
     parameters: dict[
         Literal[
             "injection_data",

@@ -21,12 +21,6 @@ from leakpipe.rates.curves import (
 )
 from leakpipe.rates.doubts import rate_findings
 from leakpipe.rates.jointly import joint_estimates, joint_findings, joint_model, roles_by_joint
-from leakpipe.rates.networked import (
-    network_estimates,
-    network_findings,
-    network_kappa,
-    network_of,
-)
 from leakpipe.rates.reported import (
     check_estimates,
     code_estimates,
@@ -69,17 +63,11 @@ def rates(
     per_check = [fit_mean(curves, check) for check in range(len(layout.measure))]
     same, pairs = fit_correlations(detection, mean_rise)
     together = memory_of_code(mean_rise, same, pairs)
-    memory = None if together is None else together[0]
-    network = network_of(detection, layout, curves, memory, settings)
     measure = measure_role(readout, settings, rng)
     data = data_role(readout, together, measure, settings, rng)
     roles = {"data": data, "measure": measure}
     variables: dict[str, Any] = {}
     variables |= code_estimates(mean_rise, same, together, curves, settings)
-    variables |= network_estimates(network, layout)
-    by_network = network_kappa(network)
-    if by_network is not None:
-        variables |= store("kappa", (), by_network)
     variables |= role_estimates(roles)
     variables |= qubit_estimates(roles)
     variables |= check_estimates(per_check)
@@ -119,9 +107,5 @@ def rates(
         },
         attrs={"convention": "discrete, per round: p[r+1] = p[r] + G (1 - p[r]) - S p[r]"},
     )
-    findings = [
-        *rate_findings(out, mean_rise, same, transport_z, layout),
-        *shape_findings,
-        *network_findings(network),
-    ]
+    findings = [*rate_findings(out, mean_rise, same, transport_z, layout), *shape_findings]
     return with_findings(out, [*findings, *joint_findings(joint, roles, bool(settings.parameters))])
