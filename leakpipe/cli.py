@@ -9,6 +9,7 @@ People's text goes to stderr or the terminal, machine output (`--json`) to stdou
 from __future__ import annotations
 
 import json
+import signal
 import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -30,11 +31,10 @@ EXIT_INTERRUPTED = 130
 
 def main() -> None:
     """Run the command line and exit with the documented code."""
+    interrupted = _remember_interrupt()
     try:
         code = commands.main(standalone_mode=False)
-    except click.exceptions.Abort:
-        code = EXIT_INTERRUPTED
-    except KeyboardInterrupt:
+    except (click.exceptions.Abort, KeyboardInterrupt):
         code = EXIT_INTERRUPTED
     except click.ClickException as error:
         error.show()
@@ -42,7 +42,24 @@ def main() -> None:
     except LeakpipeError as error:
         click.echo(str(error), err=True)
         code = error.exit_code
+    except Exception:
+        # An interruption inside a library's import comes out as that library's own error.
+        if not interrupted:
+            raise
+        code = EXIT_INTERRUPTED
     sys.exit(code if isinstance(code, int) else 0)
+
+
+def _remember_interrupt() -> list[int]:
+    """Note every SIGINT in the list that is returned, and raise KeyboardInterrupt as usual."""
+    seen: list[int] = []
+
+    def note(number: int, _frame: object) -> None:
+        seen.append(number)
+        raise KeyboardInterrupt
+
+    signal.signal(signal.SIGINT, note)
+    return seen
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]})
